@@ -1,0 +1,2 @@
+//! hushwatch
+fn main() {}

@@ -1,0 +1,2 @@
+//! hushwatchd
+fn main() {}
