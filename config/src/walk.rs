@@ -130,6 +130,16 @@ impl<'a> Table<'a> {
         Some(Value::new(name.get_ref().as_ref(), value, self.collector))
     }
 
+    /// The value of a key as the closure reads it, or another if the table has none; `None` if it is wrong.
+    pub fn read_or<T>(&self, key: &'static str, other: T, read: impl FnOnce(Value<'a>) -> Option<T>) -> Option<T> {
+        self.optional(key).map_or(Some(other), read)
+    }
+
+    /// The value of a key as the closure reads it, `Some(None)` if the table has none; `None` if it is wrong.
+    pub fn read_if_any<T>(&self, key: &'static str, read: impl FnOnce(Value<'a>) -> Option<T>) -> Option<Option<T>> {
+        self.optional(key).map_or(Some(None), |value| read(value).map(Some))
+    }
+
     /// The value of a key that must be there; its absence is a fault. `example` is how the line could look.
     pub fn required(&self, key: &'static str, example: &str) -> Option<Value<'a>> {
         let value = self.optional(key);

@@ -78,6 +78,11 @@ pub(super) enum NoQuantity {
 }
 
 impl Dimension {
+    /// The value of a text with its unit, in the base unit.
+    pub fn value_of(&self, text: &str) -> Option<f64> {
+        self.parse(text).ok().map(|(value, _)| value)
+    }
+
     /// The value in the base unit, and the unit in which it was written (never an alias).
     pub(super) fn parse(&self, text: &str) -> Result<(f64, &'static str), NoQuantity> {
         let (number, unit) = split(text.trim()).ok_or(NoQuantity::NoNumber)?;
