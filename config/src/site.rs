@@ -119,6 +119,7 @@ pub fn parse(text: &str, path: &Path) -> Result<Site, Faults> {
 }
 
 fn read(root: &mut Table<'_>, base: &Path, source: &Arc<Source>) -> Option<Site> {
+    read_format(root)?;
     root.keys(&[
         "format",
         "site",
@@ -132,7 +133,6 @@ fn read(root: &mut Table<'_>, base: &Path, source: &Arc<Source>) -> Option<Site>
         "operating_states",
         "recipient",
     ]);
-    read_format(root)?;
     let head = root.required("site", "[site]").and_then(|value| value.table(settings::read_head));
     let slug = head.as_ref().map_or("site", |head| head.name.as_str());
     let record = settings::read_record(root, base, slug);

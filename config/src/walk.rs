@@ -189,7 +189,11 @@ fn kind_of(value: &DeValue<'_>) -> &'static str {
         DeValue::Integer(_) => "a whole number",
         DeValue::Float(_) => "a number with a decimal point",
         DeValue::Boolean(_) => "true or false",
-        DeValue::Datetime(_) => "a date or time",
+        DeValue::Datetime(written) => match (written.date, written.time) {
+            (Some(_), None) => "a date",
+            (None, _) => "a time of day",
+            (Some(_), Some(_)) => "a date with a time of day",
+        },
         DeValue::Array(_) => "a list",
         DeValue::Table(_) => "a table",
     }

@@ -64,7 +64,7 @@ error: `count` must be a whole number, not a number with a decimal point
 4 | count = 7.5
   |         ^^^
   |
-  = help: write it as in `count = 1`
+  = help: write a number from 1 to 9, without quotes
 "#,
     );
 }

@@ -68,10 +68,8 @@ impl Shelved for Band {
         let limits = read_limits(table);
         let rbw_hz = table.read_if_any("rbw", |value| value.quantity_within(&FREQUENCY, 1.0..=1e9));
         let detector = table.read_or("detector", Detector::Rms, |value| value.choice(&detectors));
-        let exclude = table.read_or("exclude", Vec::new(), read_ranges);
+        let exclude = table.read_or("exclude", Vec::new(), |value| read_exclusions(value, limits));
         let (from_hz, to_hz) = limits?;
-        let exclude = exclude?.into_iter().map(|(range, value)| within(range, (from_hz, to_hz), value));
-        let exclude = exclude.collect::<Vec<_>>().into_iter().collect::<Option<Vec<_>>>();
         let rbw_hz = rbw_hz?.unwrap_or_else(|| rbw_by_default(from_hz));
         check_width((from_hz, to_hz), rbw_hz, table)?;
         let exclude = check_rest((from_hz, to_hz), exclude?, table)?;
@@ -104,32 +102,26 @@ fn check_width((from_hz, to_hz): (f64, f64), rbw_hz: f64, table: &Table<'_>) -> 
     None
 }
 
-/// Ranges as they are written, each with its place.
-fn read_ranges(value: Value<'_>) -> Option<Vec<((f64, f64), Value<'_>)>> {
+/// Ranges within the limits of the band, if these are known.
+fn read_exclusions(value: Value<'_>, limits: Option<(f64, f64)>) -> Option<Vec<(f64, f64)>> {
+    const EXAMPLE: &str = "[\"5.9 MHz\", \"6.2 MHz\"]";
     let read = value.list()?.into_iter().map(|range| {
-        let [from, to] = range.tuple("[\"5.9 MHz\", \"6.2 MHz\"]")?;
+        let [from, to] = range.tuple(EXAMPLE)?;
         let (from, to) = (read_frequency(from), read_frequency(to));
         let (from, to) = (from?, to?);
-        if from < to {
-            return Some(((from, to), range));
+        if from >= to {
+            return range
+                .refuse("this range ends before it begins", format!("write the lower limit first, as in `{EXAMPLE}`"));
         }
-        range.refuse(
-            "this range ends before it begins",
-            "write the lower limit first, as in `[\"5.9 MHz\", \"6.2 MHz\"]`",
-        )
+        match limits {
+            Some((least, most)) if from < least || to > most => {
+                let band = format!("{} to {}", FREQUENCY.write(least), FREQUENCY.write(most));
+                range.refuse("this range reaches beyond the band", format!("cut it to the band's limits, {band}"))
+            }
+            _ => Some((from, to)),
+        }
     });
     read.collect::<Vec<_>>().into_iter().collect()
-}
-
-fn within(range: (f64, f64), band: (f64, f64), value: Value<'_>) -> Option<(f64, f64)> {
-    if band.0 <= range.0 && range.1 <= band.1 {
-        return Some(range);
-    }
-    let (from, to) = (FREQUENCY.write(band.0), FREQUENCY.write(band.1));
-    value.refuse(
-        format!("this range reaches beyond the band, which goes from {from} to {to}"),
-        "cut it to the band's limits",
-    )
 }
 
 /// Sorts the exclusions and sees that they leave something.

@@ -1,5 +1,6 @@
 //! Cables: each with its input, probe, bands, choke, loop and requirement.
 
+use std::cell::RefCell;
 use std::ops::Range;
 use std::path::Path;
 
@@ -73,11 +74,26 @@ pub(super) struct Shelves<'a> {
     probes: Shelf<'a, Probe>,
     bands: Shelf<'a, Band>,
     chokes: Shelf<'a, Choke>,
+    /// Bands and probes of which it was told that they do not fit wholly: once is enough.
+    warned: RefCell<Vec<(String, String)>>,
 }
 
 impl<'a> Shelves<'a> {
     pub(super) fn read(root: &Table<'a>, base: &Path) -> Self {
-        Self { probes: Shelf::read(root, base.to_owned()), bands: Shelf::read(root, ()), chokes: Shelf::read(root, ()) }
+        Self {
+            probes: Shelf::read(root, base.to_owned()),
+            bands: Shelf::read(root, ()),
+            chokes: Shelf::read(root, ()),
+            warned: RefCell::default(),
+        }
+    }
+
+    fn is_first_warning(&self, band: &Band, probe: &Probe) -> bool {
+        let pair = (band.name.clone(), probe.name.clone());
+        let mut warned = self.warned.borrow_mut();
+        let first = !warned.contains(&pair);
+        warned.push(pair);
+        first
     }
 }
 
@@ -86,7 +102,8 @@ pub(super) fn read_all<'a>(root: &Table<'a>, shelves: &Shelves<'a>, instruments:
     root.required("cable", "[[cable]]");
     let mut tags = Names::default();
     let mut witnesses = Vec::new();
-    let cables = root.tables("cable").into_iter().filter_map(|value| {
+    let tables = root.tables("cable");
+    let cables = tables.iter().filter_map(|value| {
         value.table(|table| {
             table.keys(KEYS);
             let place = table.required("tag", "tag = \"W12\"");
@@ -98,13 +115,16 @@ pub(super) fn read_all<'a>(root: &Table<'a>, shelves: &Shelves<'a>, instruments:
             read_one(table, shelves, instruments)
         })
     });
-    let cables = cables.collect();
+    let cables: Vec<Cable> = cables.collect();
     for (witness, tag) in witnesses {
         check_witness(witness, tag, &tags.all());
     }
-    shelves.probes.warn_of_unused();
-    shelves.bands.warn_of_unused();
-    shelves.chokes.warn_of_unused();
+    // What a cable with faults would have used is not known.
+    if cables.len() == tables.len() {
+        shelves.probes.warn_of_unused();
+        shelves.bands.warn_of_unused();
+        shelves.chokes.warn_of_unused();
+    }
     cables
 }
 
@@ -212,7 +232,7 @@ fn read_bands<'a>(table: &Table<'a>, shelves: &Shelves<'a>, probe: Option<&Probe
         if bands.is_empty() {
             return refuse_no_bands(place, shelves, probe?);
         }
-        return check_range(bands.into_iter().map(|band| (band, place)).collect(), probe);
+        return check_range(bands.into_iter().map(|band| (band, place)).collect(), probe?, shelves);
     };
     let items = value.list()?;
     if items.is_empty() {
@@ -231,7 +251,7 @@ fn read_bands<'a>(table: &Table<'a>, shelves: &Shelves<'a>, probe: Option<&Probe
         names.push(band.name.clone());
         bands.push((band, item));
     }
-    check_range(bands, probe)
+    check_range(bands, probe?, shelves)
 }
 
 fn refuse_no_bands<T>(place: Value<'_>, shelves: &Shelves<'_>, probe: &Probe) -> Option<T> {
@@ -254,8 +274,7 @@ fn refuse_no_bands<T>(place: Value<'_>, shelves: &Shelves<'_>, probe: &Probe) ->
 
 /// Refuses bands of which less than half lies within the probe's range, as they would never have a usable level, and
 /// warns of those that are cut.
-fn check_range(bands: Vec<(Band, Value<'_>)>, probe: Option<&Probe>) -> Option<Vec<Band>> {
-    let probe = probe?;
+fn check_range(bands: Vec<(Band, Value<'_>)>, probe: &Probe, shelves: &Shelves<'_>) -> Option<Vec<Band>> {
     let range = probe.range();
     let mut fits = true;
     for (band, place) in &bands {
@@ -266,7 +285,7 @@ fn check_range(bands: Vec<(Band, Value<'_>)>, probe: Option<&Probe>) -> Option<V
             let outside = if share == 0.0 { "lies outside" } else { "lies for the most part outside" };
             place.refuse::<()>(format!("the band `{}` {outside} the range of the probe", band.name), help);
             fits = false;
-        } else if share < 1.0 {
+        } else if share < 1.0 && shelves.is_first_warning(band, probe) {
             let percent = ((1.0 - share) * 100.0).ceil();
             let what = format!("{percent} % of the band `{}` lie outside the range of the probe", band.name);
             place.warn(what, format!("{help}; its levels will be `uncertain`"));

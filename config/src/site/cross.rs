@@ -30,7 +30,7 @@ pub(super) fn cadence(cables: &[Cable], drift: &PlacedDrift, collector: &Collect
         let what = format!("a block of {block} is shorter than the time between levels of cable `{}`", cable.tag);
         let fault = Fault::warning(place, what);
         let help = format!(
-            "a cable without `every` is looked at every {EVERY_AT_LEAST} at most: write its `every`, or a longer block"
+            "a cable without `every` is looked at every {EVERY_AT_LEAST} or less often: write its `every`, or a longer block"
         );
         collector.push(fault.with_help(help));
     }

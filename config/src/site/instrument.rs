@@ -1,5 +1,7 @@
 //! Instruments: receivers on serial ports.
 
+use std::collections::BTreeSet;
+use std::ops::{Range, RangeInclusive};
 use std::path::{Path, PathBuf};
 
 use hushwatch_quantity::{FilterShape, ReceiverUnit, Span};
@@ -103,7 +105,7 @@ pub struct Instrument {
     /// From this level on at its input it is overloaded, dB(uV), if it is known.
     pub overload_dbuv: Option<f64>,
     /// Where its name stands in the site file.
-    pub place: std::ops::Range<usize>,
+    pub place: Range<usize>,
 }
 
 /// The instruments of a site by name, those with faults too.
@@ -118,16 +120,16 @@ impl<'a> Instruments<'a> {
         let names = || self.entries.iter().filter_map(|(name, _)| *name);
         match self.entries.iter().position(|(known, _)| *known == Some(name)) {
             Some(index) => Some(index),
-            None => value.refuse_name("no instrument is named", &name.escape_debug().to_string(), names()),
+            None => value.refuse_name("no instrument is named", name, names()),
         }
     }
 
     /// The only one, for a cable that does not say; a fault if there are several. Without any, that has been told.
     pub(super) fn only(&self, cable: &Table<'_>) -> Option<usize> {
         if self.entries.len() > 1 {
-            let names = self.entries.iter().filter_map(|(name, _)| *name);
+            let names = self.entries.iter().filter_map(|(name, _)| *name).collect::<BTreeSet<_>>();
             let fault = Fault::new(cable.span(), "which instrument sees this cable?");
-            cable.push(fault.with_help(format!("write `instrument = \"...\"`: {}", suggestion("", names))));
+            cable.push(fault.with_help("write `instrument = \"...\"`").with_help(suggestion("", names)));
             return None;
         }
         (self.entries.len() == 1).then_some(0)
@@ -233,12 +235,7 @@ fn read_one(table: &Table<'_>, base: &Path) -> Option<Instrument> {
     })
 }
 
-fn read_span(
-    table: &Table<'_>,
-    key: &'static str,
-    by_default: Span,
-    limits: std::ops::RangeInclusive<Span>,
-) -> Option<Span> {
+fn read_span(table: &Table<'_>, key: &'static str, by_default: Span, limits: RangeInclusive<Span>) -> Option<Span> {
     table.read_or(key, by_default, |value| value.duration(limits))
 }
 
@@ -249,11 +246,10 @@ fn read_dialect(value: Value<'_>, base: &Path) -> Option<Dialect> {
         return Some(dialect);
     }
     if !name.contains('/') && Path::new(name).extension().is_none_or(|ending| ending != "toml") {
-        let near = suggestion(name, dialect::BUILTIN);
-        return value.refuse(
-            format!("no dialect `{}` is built in", name.escape_debug()),
-            format!("{near}; the path of a dialect file ends in `.toml`"),
-        );
+        let fault = Fault::new(value.span(), format!("no dialect `{}` is built in", name.escape_debug()));
+        let fault = fault.with_help(suggestion(name, dialect::BUILTIN));
+        value.collector().push(fault.with_help("the path of a dialect file ends in `.toml`"));
+        return None;
     }
     let path = base.join(name);
     let text = match std::fs::read_to_string(&path) {

@@ -96,9 +96,9 @@ impl Shelved for Probe {
     fn read(table: &mut Table<'_>, name: &str, base: &PathBuf) -> Option<Self> {
         let kinds = ProbeKind::ALL.map(|kind| (kind.label(), kind));
         let kind = table.required("kind", "kind = \"current-probe\"").and_then(|value| value.choice(&kinds));
-        // With an unknown kind the numbers of the factor are read all the same, so that they are checked.
-        let dimension = kind.unwrap_or(ProbeKind::Current).factor_dimension();
-        let factor = kind.map(|kind| read_curve(table, ["factor", "factor_file"], base, dimension, kind));
+        // Without its kind nobody knows in which unit the factor is.
+        let factor =
+            kind.and_then(|kind| read_curve(table, ["factor", "factor_file"], base, kind.factor_dimension(), kind));
         let path_loss = read_curve(table, ["path_loss", "path_loss_file"], base, &RATIO, ProbeKind::Direct);
         let serial = table.read_if_any("serial", |value| value.line());
         let calibrated = table.read_if_any("calibrated", |value| value.date());
@@ -112,7 +112,7 @@ impl Shelved for Probe {
         Some(Self {
             name: name.to_owned(),
             kind: kind?,
-            factor: factor??,
+            factor: factor?,
             path_loss: path_loss?,
             serial: serial?.map(str::to_owned),
             calibrated: calibrated?,

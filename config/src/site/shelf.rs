@@ -43,8 +43,8 @@ impl<'a, T: Shelved> Shelf<'a, T> {
                 let name = place.and_then(|value| value.name());
                 let content = T::read(table, name.unwrap_or_default(), &context);
                 let (place, name) = (place?, name?);
-                names.add(place, name, &format!("another {} is named", T::KEY));
-                Some(Entry { name, place, content, used: Cell::new(false) })
+                let first = names.add(place, name, &format!("another {} is named", T::KEY));
+                first.then(|| Entry { name, place, content, used: Cell::new(false) })
             })
         });
         let entries = entries.collect();
@@ -67,7 +67,7 @@ impl<'a, T: Shelved> Shelf<'a, T> {
         let name = value.text()?;
         let Some(entry) = self.entries.iter().find(|entry| entry.name == name) else {
             let names = self.entries.iter().map(|entry| entry.name);
-            return value.refuse_name(&format!("no {} is named", T::KEY), &name.escape_debug().to_string(), names);
+            return value.refuse_name(&format!("no {} is named", T::KEY), name, names);
         };
         entry.used.set(true);
         entry.content.clone()
@@ -83,9 +83,9 @@ impl<'a, T: Shelved> Shelf<'a, T> {
         self.entries.is_empty()
     }
 
-    /// Warns of those that nobody asked for.
+    /// Warns of those that nobody asked for; those with faults have been told of already.
     pub(super) fn warn_of_unused(&self) {
-        for entry in self.entries.iter().filter(|entry| !entry.used.get()) {
+        for entry in self.entries.iter().filter(|entry| !entry.used.get() && entry.content.is_some()) {
             let what = format!("no cable uses the {} `{}`", T::KEY, entry.name);
             entry.place.warn(what, "name it at a cable, or leave it out");
         }
@@ -99,16 +99,17 @@ pub(super) struct Names<'a> {
 }
 
 impl<'a> Names<'a> {
-    /// Remembers a name; tells if it was there before, as in "another probe is named".
-    pub(super) fn add(&mut self, place: Value<'a>, name: &'a str, what: &str) {
+    /// Remembers a name and answers whether it is new; if not, that is told, as in "another probe is named".
+    pub(super) fn add(&mut self, place: Value<'a>, name: &'a str, what: &str) -> bool {
         if let Some((_, first)) = self.seen.iter().find(|(seen, _)| *seen == name) {
             let fault = Fault::new(place.span(), format!("{what} `{name}`"))
                 .with_related(first.span(), "the first one")
                 .with_help("each must have its own");
             place.collector().push(fault);
-        } else {
-            self.seen.push((name, place));
+            return false;
         }
+        self.seen.push((name, place));
+        true
     }
 
     /// All names, each once.

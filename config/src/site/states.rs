@@ -249,8 +249,10 @@ fn read_days(value: Value<'_>) -> Option<[bool; 7]> {
 fn read_day(value: Value<'_>, name: &str) -> Option<usize> {
     let day = DAYS.iter().position(|day| *day == name);
     day.or_else(|| {
-        let help = format!("{}; write them as in `\"Mon-Fri\"` or `\"Sat,Sun\"`", suggestion(name, DAYS));
-        value.refuse(format!("`{}` is not a day of the week", name.escape_debug()), help)
+        let fault = Fault::new(value.span(), format!("`{}` is not a day of the week", name.escape_debug()));
+        let fault = fault.with_help(suggestion(name, DAYS));
+        value.collector().push(fault.with_help("write days as in `\"Mon-Fri\"` or `\"Sat,Sun\"`"));
+        None
     })
 }
 

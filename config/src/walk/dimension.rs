@@ -94,14 +94,19 @@ impl Dimension {
         }
         let written = self.aliases.iter().find(|(alias, _)| *alias == unit).map_or(unit, |(_, unit)| unit);
         match self.units.iter().find(|(name, _)| *name == written) {
+            // 26 mm are 26 / 1000 m, the nearest number to 0.026; 26 times 0.001 would be its neighbour.
+            Some((name, worth)) if *worth < 1.0 => Ok((number / worth.recip().round(), name)),
             Some((name, worth)) => Ok((number * worth, name)),
             None => Err(NoQuantity::OtherUnit(self.same_but_for_case(unit))),
         }
     }
 
-    /// A value in the base unit as it is written: in the largest unit of which it has at least one.
+    /// A value in the base unit as it is written: in the largest unit of which it has at least one. Units that are
+    /// no power of 1000 of the base unit are read but not written: the trade measures cores in mm, not in cm.
     pub fn write(&self, value: f64) -> String {
-        let fitting = self.units.iter().rev().find(|(_, worth)| value.abs() >= *worth * (1.0 - 1e-9));
+        let written = |worth: f64| (worth.log10() / 3.0).fract().abs() < 1e-9;
+        let fitting =
+            self.units.iter().rev().find(|(_, worth)| written(*worth) && value.abs() >= *worth * (1.0 - 1e-9));
         let base = self.units.iter().find(|(_, worth)| *worth == 1.0);
         let smallest = if value == 0.0 { base.or(self.units.first()) } else { self.units.first() };
         let (unit, worth) = fitting.or(smallest).copied().unwrap_or(("", 1.0));
@@ -150,7 +155,7 @@ mod tests {
             (&FACTOR, "+2.5 dB(ohm)", 2.5),
         ] {
             let (value, _) = dimension.parse(text).unwrap_or_else(|error| panic!("{text}: {error:?}"));
-            assert!((value - wanted).abs() <= 1e-12 * wanted.abs(), "{text}: {value}");
+            assert_eq!(value, wanted, "{text}");
         }
     }
 
@@ -177,7 +182,7 @@ mod tests {
         assert_eq!(FREQUENCY.write(150e3), "150 kHz");
         assert_eq!(FREQUENCY.write(30e6), "30 MHz");
         assert_eq!(FREQUENCY.write(0.0), "0 Hz");
-        assert_eq!(LENGTH.write(0.026), "2.6 cm");
+        assert_eq!(LENGTH.write(0.026), "26 mm");
         assert_eq!(LENGTH.write(0.0), "0 m");
         assert_eq!(RATIO.write(-0.5), "-0.5 dB");
     }

@@ -1,15 +1,16 @@
 //! The known name that somebody most probably meant.
 
 /// The candidate nearest to `name`, if one is near enough to be a slip of the pen: a third of its letters, and one
-/// in a short name. Upper and lower case count as the same.
-pub fn nearest<'a>(name: &str, candidates: impl IntoIterator<Item = &'a str>) -> Option<&'a str> {
+/// in a short name; or one that goes on where the other ends. Upper and lower case count as the same.
+pub fn nearest<'a>(name: &str, candidates: impl IntoIterator<Item = &'a str, IntoIter: Clone>) -> Option<&'a str> {
     let wanted: Vec<char> = name.to_lowercase().chars().collect();
     // Names from a file may be of any length, and the distance takes the product of both.
     if wanted.len() > 100 {
         return None;
     }
+    let mut candidates = candidates.into_iter();
     candidates
-        .into_iter()
+        .clone()
         .map(|candidate| {
             let letters: Vec<char> = candidate.to_lowercase().chars().collect();
             (distance(&wanted, &letters), letters.len(), candidate)
@@ -17,6 +18,12 @@ pub fn nearest<'a>(name: &str, candidates: impl IntoIterator<Item = &'a str>) ->
         .filter(|(distance, length, _)| *distance <= (length.max(&wanted.len()) / 3).max(1) && distance < length)
         .min_by_key(|(distance, _, _)| *distance)
         .map(|(_, _, candidate)| candidate)
+        .or_else(|| candidates.find(|candidate| goes_on(&name.to_lowercase(), &candidate.to_lowercase())))
+}
+
+/// Does one begin with the other, as `baudrate` and `baud`?
+fn goes_on(a: &str, b: &str) -> bool {
+    a.len().min(b.len()) >= 3 && (a.starts_with(b) || b.starts_with(a))
 }
 
 /// A line of help for a name that is not known: the nearest one, or all of them.
@@ -80,6 +87,7 @@ mod tests {
         assert_eq!(nearest("prob", known), Some("probe"));
         assert_eq!(nearest("BAUD", known), Some("baud"));
         assert_eq!(nearest("evry", known), Some("every"));
+        assert_eq!(nearest("baudrate", known), Some("baud"));
         assert_eq!(nearest("colour", known), None);
         assert_eq!(nearest("", known), None);
         assert_eq!(nearest(&"x".repeat(100_000), known), None);

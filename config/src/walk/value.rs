@@ -74,7 +74,7 @@ impl<'a> Value<'a> {
 
     /// Tells that this name is not known, with the nearest one that is. `what` as in "no probe is named".
     pub fn refuse_name<T>(&self, what: &str, name: &str, known: impl IntoIterator<Item = &'a str>) -> Option<T> {
-        self.refuse(format!("{what} `{name}`"), suggestion(name, known))
+        self.refuse(format!("{what} `{}`", name.escape_debug()), suggestion(name, known))
     }
 
     fn refuse_kind<T>(&self, wanted: &str, example: &str) -> Option<T> {
@@ -128,7 +128,10 @@ impl<'a> Value<'a> {
     /// A whole number within limits.
     pub fn integer(&self, limits: RangeInclusive<i64>) -> Option<i64> {
         let DeValue::Integer(integer) = self.node.get_ref() else {
-            return self.refuse_kind("a whole number", &format!("{} = {}", self.key, limits.start()));
+            return self.refuse(
+                format!("`{}` must be a whole number, not {}", self.key, kind_of(self.node.get_ref())),
+                format!("write a number from {} to {}, without quotes", limits.start(), limits.end()),
+            );
         };
         match i64::from_str_radix(integer.as_str(), integer.radix()) {
             Ok(number) if limits.contains(&number) => Some(number),
@@ -150,7 +153,10 @@ impl<'a> Value<'a> {
         let number = match self.node.get_ref() {
             DeValue::Integer(integer) => i64::from_str_radix(integer.as_str(), integer.radix()).ok().map(|n| n as f64),
             DeValue::Float(float) => float.as_str().parse().ok(),
-            _ => return self.refuse_kind("a number", &format!("{} = {}", self.key, limits.start().max(1.0))),
+            _ => {
+                let what = format!("`{}` must be a number, not {}", self.key, kind_of(self.node.get_ref()));
+                return self.refuse(what, "write it without quotes");
+            }
         };
         match number {
             Some(number) if limits.contains(&number) => Some(number),
@@ -195,7 +201,7 @@ impl<'a> Value<'a> {
     pub fn tuple<const N: usize>(&self, example: &str) -> Option<[Value<'a>; N]> {
         let values = match self.node.get_ref() {
             DeValue::Array(_) => self.list()?,
-            _ => return self.refuse_kind(&format!("a list of {N}"), example),
+            _ => return self.refuse_kind(&format!("a list of {N} values"), example),
         };
         let found = values.len();
         values.try_into().ok().or_else(|| {
@@ -282,6 +288,10 @@ impl<'a> Value<'a> {
             }
             return self.refuse_kind("a span of time", "\"10 s\"");
         };
+        if text.trim().parse::<f64>().is_ok() {
+            return self
+                .refuse(format!("`{}` is a span of time and needs its unit", text.escape_debug()), like("10 s"));
+        }
         let span = match parse_span(text) {
             Ok((0, span)) => span,
             Ok(_) => return self.refuse("years have no fixed length", "write it in days, as in `400 days`"),
