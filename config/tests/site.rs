@@ -10,9 +10,10 @@ use hushwatch_config::site::{
 use hushwatch_quantity::{Detector, FilterShape, LevelUnit, ReceiverUnit, Span, Time};
 use jiff::civil::{Weekday, date, time};
 
+#[expect(clippy::panic, reason = "a helper of tests")]
 fn load(name: &str) -> Site {
     // Tests of a package run in its folder.
-    site::load(&Path::new("tests/sites").join(name)).unwrap_or_else(|faults| unreachable!("{name}: {faults}"))
+    site::load(&Path::new("tests/sites").join(name)).unwrap_or_else(|faults| panic!("{name}: {faults}"))
 }
 
 fn text_of(name: &str) -> String {

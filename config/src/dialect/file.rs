@@ -50,7 +50,8 @@ fn dialect(root: &mut Table<'_>) -> Option<Dialect> {
     let name = root.required("name", "name = \"my-receiver\"").and_then(|value| value.name());
     let description = optional(root, "description", |value| value.line());
     let line = optional(root, "line", |value| value.table(line));
-    let identify = root.required("identify", "identify = { query = \"*IDN?\" }").and_then(|value| value.table(identify));
+    let identify =
+        root.required("identify", "identify = { query = \"*IDN?\" }").and_then(|value| value.table(identify));
     let errors = optional(root, "errors", |value| value.table(errors));
     let prepare = optional(root, "prepare", |value| value.table(prepare));
     let select_input = optional(root, "input", |value| value.table(input));

@@ -112,7 +112,11 @@ fn contradictions_are_refused() {
     for (from, to, what) in [
         ("setting.stop_hz = { set = \"B {stop_hz}\" }", "", "no setting tells the instrument where to sweep"),
         ("{ set = \"A {start_hz}\" }", "{ set = \"A {start_hz}\", words = {} }", "is a number and has no words"),
-        ("{ set = \"A {start_hz}\" }", "{ set = \"A {start_hz}\", compare = \"text\", tolerance = 0.1 }", "no tolerance"),
+        (
+            "{ set = \"A {start_hz}\" }",
+            "{ set = \"A {start_hz}\", compare = \"text\", tolerance = 0.1 }",
+            "no tolerance",
+        ),
         ("values = [{ coding = \"ascii\" }]", "", "`values` is missing"),
         ("format = 1", "format = 2", "`format` must lie between 1 and 1"),
         ("format = 1", "format = 1\ninput = { select = \"ROUT:CLOS\" }", "this selects no input"),

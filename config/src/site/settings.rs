@@ -7,7 +7,7 @@ use hushwatch_quantity::Span;
 use jiff::tz::TimeZone;
 
 use crate::faults::Fault;
-use crate::walk::{Table, Value};
+use crate::walk::{Table, Value, nearest};
 
 /// The folder in which a record lies if the site file does not say where.
 const RECORD_FOLDER: &str = "/var/lib/hushwatch";
@@ -62,10 +62,14 @@ fn read_zone(value: Value<'_>) -> Option<(Option<String>, TimeZone)> {
     let name = value.line()?;
     match TimeZone::get(name) {
         Ok(zone) => Some((Some(name.to_owned()), zone)),
-        Err(_) => value.refuse(
-            format!("no time zone `{name}` is known on this system"),
-            "write a zone of the IANA database, as in `\"Europe/Vienna\"`; on Debian it comes with the package `tzdata`",
-        ),
+        Err(_) => {
+            let zones: Vec<String> = jiff::tz::db().available().map(|zone| zone.to_string()).collect();
+            let help = match nearest(name, zones.iter().map(String::as_str)) {
+                Some(near) => format!("did you mean `{near}`?"),
+                None => String::from("write a zone of the IANA database, as in `\"Europe/Vienna\"`"),
+            };
+            value.refuse(format!("there is no time zone `{name}`"), help)
+        }
     }
 }
 
