@@ -4,6 +4,7 @@
 //! who talk to people.
 
 use core::fmt;
+use core::fmt::Write as _;
 use core::ops::{Add, Sub};
 
 const MICROS_PER_SEC: i64 = 1_000_000;
@@ -217,7 +218,7 @@ impl fmt::Display for Span {
                     text.push(' ');
                 }
                 let unit = if count == 1 && *unit == "days" { "day" } else { unit };
-                text.push_str(&format!("{count} {unit}"));
+                let _ = write!(text, "{count} {unit}");
             }
         }
         f.pad(&text)
