@@ -26,7 +26,7 @@ pub(super) fn words_of(quantity: Quantity) -> Option<&'static [&'static str]> {
 }
 
 pub(super) fn read(source: &Arc<Source>) -> Result<Dialect, Faults> {
-    document(source, |root| dialect(root)).map(|read| read.value)
+    document(source, dialect).map(|read| read.value)
 }
 
 fn dialect(root: &mut Table<'_>) -> Option<Dialect> {

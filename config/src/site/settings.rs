@@ -60,17 +60,15 @@ pub(super) fn read_head(table: &mut Table<'_>) -> Option<Head> {
 
 fn read_zone(value: Value<'_>) -> Option<(Option<String>, TimeZone)> {
     let name = value.line()?;
-    match TimeZone::get(name) {
-        Ok(zone) => Some((Some(name.to_owned()), zone)),
-        Err(_) => {
-            let zones: Vec<String> = jiff::tz::db().available().map(|zone| zone.to_string()).collect();
-            let help = match nearest(name, zones.iter().map(String::as_str)) {
-                Some(near) => format!("did you mean `{near}`?"),
-                None => String::from("write a zone of the IANA database, as in `\"Europe/Vienna\"`"),
-            };
-            value.refuse(format!("there is no time zone `{name}`"), help)
-        }
+    if let Ok(zone) = TimeZone::get(name) {
+        return Some((Some(name.to_owned()), zone));
     }
+    let zones: Vec<String> = jiff::tz::db().available().map(|zone| zone.to_string()).collect();
+    let help = match nearest(name, zones.iter().map(String::as_str)) {
+        Some(near) => format!("did you mean `{near}`?"),
+        None => String::from("write a zone of the IANA database, as in `\"Europe/Vienna\"`"),
+    };
+    value.refuse(format!("there is no time zone `{name}`"), help)
 }
 
 /// The record's settings and the path of the control socket.
