@@ -18,7 +18,7 @@ mod board;
 mod words;
 
 pub use board::{Action, AlarmError, Board, Event, Notify};
-pub use words::{AlarmKey, AlarmKind, AlarmState, Cause, Detail, Place, Transition};
+pub use words::{AlarmKey, AlarmKind, AlarmState, CAUTION, Cause, Detail, Place, Transition};
 
 use hushwatch_quantity::Time;
 use serde::{Deserialize, Serialize};

@@ -184,3 +184,34 @@ mod optional_micros {
         Ok(Option::<i64>::deserialize(deserializer)?.map(Time::from_micros))
     }
 }
+
+/// What to mind before going to the cabinet (common practice).
+pub const CAUTION: &str = "Live parts: only qualified persons may open the cabinet, by the local rules and the plant's own. \
+    Cores on power cables can be hot. Clamps belong on insulated conductors only.";
+
+impl AlarmKind {
+    /// What to look at, in this order (common practice).
+    pub fn look_first(self) -> &'static [&'static str] {
+        match self {
+            Self::Regression | Self::Weakening => &[
+                "the choke on this cable: is it there, is its clip fully closed, is a half cracked, are there as many turns as there were?",
+                "is it hot, or was it moved to another place on the cable?",
+                "the shield's bond and the earth connections at both ends of the cable",
+                "was the drive set otherwise (carrier frequency, filter), or was something new connected?",
+                "the probe: is it where it was, is its connector tight?",
+            ],
+            Self::Source => &[
+                "the source that the cables share: was a drive set otherwise or exchanged?",
+                "what was connected or switched on at that time?",
+            ],
+            Self::SignalLost => &["the probe: is it on the cable?", "its connector, its cable, its amplifier's supply"],
+            Self::Instrument => &[
+                "the receiver: is it on, and plugged in at the port that the site file names?",
+                "is it the receiver that it was, with nobody else using it?",
+                "its serial cable and adapter",
+            ],
+            Self::Record => &["the disk: is it full, or worn out?", "the owner and the rights of the record's folder"],
+            Self::Clock => &["the computer's clock, and where it takes its time from"],
+        }
+    }
+}

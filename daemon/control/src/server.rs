@@ -72,7 +72,11 @@ pub fn listen(path: &Path) -> Result<UnixListener, ListenError> {
 
 /// Answers the requests of one connection until the other end hangs up, is silent for too long or sends what is no
 /// request (it is told so first).
-pub async fn converse(stream: UnixStream, mut answer: impl AsyncFnMut(Request, Peer) -> Reply) {
+pub async fn converse<F, Answer>(stream: UnixStream, mut answer: F)
+where
+    F: FnMut(Request, Peer) -> Answer,
+    Answer: Future<Output = Reply>,
+{
     let Ok(credentials) = stream.peer_cred() else { return };
     let peer = Peer { user: credentials.uid(), process: credentials.pid() };
     let (read, mut write) = stream.into_split();

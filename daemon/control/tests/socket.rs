@@ -8,7 +8,7 @@ use std::os::unix::net::UnixStream;
 use std::path::Path;
 
 use hushwatch_control::{
-    Client, ControlError, Hello, ListenError, MarkReference, PROTOCOL, Reply, Request, When, converse, listen,
+    Client, ControlError, Hello, ListenError, MarkReference, PROTOCOL, Peer, Reply, Request, When, converse, listen,
 };
 
 fn hello(protocol: u32) -> Hello {
@@ -22,10 +22,12 @@ fn serve(path: &Path, protocol: u32) -> tokio::runtime::Runtime {
     let listener = runtime.block_on(async { listen(path) }).expect("a socket");
     runtime.spawn(async move {
         while let Ok((stream, _)) = listener.accept().await {
-            tokio::spawn(converse(stream, async move |request, peer| match request {
-                Request::Hello => Reply::Hello(hello(protocol)),
-                Request::Flush if peer.process.is_some() => Reply::Done,
-                other => Reply::Refused { why: format!("not this: {other:?}") },
+            tokio::spawn(converse(stream, move |request, peer: Peer| {
+                std::future::ready(match request {
+                    Request::Hello => Reply::Hello(hello(protocol)),
+                    Request::Flush if peer.process.is_some() => Reply::Done,
+                    other => Reply::Refused { why: format!("not this: {other:?}") },
+                })
             }));
         }
     });

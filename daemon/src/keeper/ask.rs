@@ -1,0 +1,73 @@
+//! Requests on the control socket.
+
+use hushwatch_alarm::{Acknowledged, Cause, Event};
+use hushwatch_control::{Acknowledge, Hello, InstrumentStatus, PROTOCOL, Peer, Reply, Request, Status};
+use hushwatch_record::RecordError;
+
+use super::Keeper;
+use crate::users;
+
+impl Keeper {
+    pub(super) fn asked(&mut self, request: Request, peer: Peer) -> Result<Reply, RecordError> {
+        match request {
+            Request::Hello => Ok(Reply::Hello(Hello {
+                protocol: PROTOCOL,
+                version: env!("CARGO_PKG_VERSION").to_owned(),
+                site: self.site.name.clone(),
+                record: self.site.record.path.display().to_string(),
+            })),
+            Request::Status => Ok(Reply::Status(self.status())),
+            Request::Flush => {
+                self.urgent = true;
+                Ok(Reply::Done)
+            }
+            Request::Acknowledge(ask) => self.acknowledge(ask, peer),
+            Request::Reference(mark) => self.mark_reference(mark, peer),
+        }
+    }
+
+    fn status(&self) -> Status {
+        let described = self.site.instruments.iter().zip(&self.instruments);
+        let instruments = described.map(|(described, known)| InstrumentStatus {
+            name: described.name.clone(),
+            identity: known.identity.clone(),
+            sweeps: known.sweeps,
+            assumed: known.assumed.iter().map(|&name| name.to_owned()).collect(),
+            trouble: known.trouble.clone(),
+        });
+        let waiting: usize = self.recipients.iter().map(|one| one.waiting.len() + usize::from(one.busy)).sum();
+        Status {
+            up_us: i64::try_from(self.started.elapsed().as_micros()).unwrap_or(i64::MAX),
+            instruments: instruments.collect(),
+            waiting_notices: waiting as u64,
+            troubles: Vec::new(),
+        }
+    }
+
+    fn acknowledge(&mut self, ask: Acknowledge, peer: Peer) -> Result<Reply, RecordError> {
+        let Some(cause) = Cause::from_label(&ask.cause) else {
+            let known: Vec<&str> = Cause::ALL.iter().map(|cause| cause.label()).collect();
+            return Ok(Reply::Refused {
+                why: format!("`{}` is no cause; take one of: {}", ask.cause, known.join(", ")),
+            });
+        };
+        let by = Acknowledged { time: self.plant_now(), who: who(ask.who, peer), note: ask.note, cause };
+        match self.board.handle(Event::Acknowledge { occurrence: ask.occurrence, by }) {
+            Ok(Some(action)) => {
+                self.perform(&action)?;
+                Ok(Reply::Done)
+            }
+            Ok(None) => Ok(Reply::Done),
+            Err(error) => Ok(Reply::Refused { why: error.to_string() }),
+        }
+    }
+}
+
+/// Who asks: the name that was given with the user that the kernel knows, or that user alone.
+pub(super) fn who(given: Option<String>, peer: Peer) -> String {
+    let user = users::name(peer.user);
+    match given.map(|given| given.trim().to_owned()).filter(|given| !given.is_empty() && *given != user) {
+        Some(given) => format!("{given} ({user})"),
+        None => user,
+    }
+}

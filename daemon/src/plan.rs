@@ -1,0 +1,129 @@
+//! From the site file to what is swept and how it is read: the settings of the pure rooms, made once per cable.
+
+use hushwatch_config::site::{Cable, Floor, Instrument, ProbeKind, Site};
+use hushwatch_instrument::{Segment, SweepAnswer, SweepPlan};
+use hushwatch_quantity::{Quality, Reason, Span};
+use hushwatch_signal as signal;
+
+/// How often a cable is looked at if the site file does not say.
+const EVERY: Span = Span::from_secs(10);
+
+/// Video bandwidth over resolution bandwidth: wide enough not to smooth what the detector is to see (common practice).
+const VIDEO_RATIO: f64 = 3.0;
+
+/// Everything that is needed to look at one cable.
+#[derive(Clone, Debug)]
+pub(crate) struct CablePlan {
+    /// The cable, by index in the site.
+    pub(crate) cable: usize,
+    /// How often it is looked at.
+    pub(crate) every: Span,
+    /// What the instrument is told.
+    pub(crate) sweep: SweepPlan,
+    bands: Vec<signal::Band>,
+    /// Which band each segment belongs to.
+    band_of: Vec<usize>,
+    chain: signal::CorrectionChain,
+    receiver: signal::Receiver,
+}
+
+impl CablePlan {
+    /// The plan for a cable on an instrument that can sweep `most_points` at once.
+    ///
+    /// # Errors
+    /// The tables of its probe make no curve.
+    pub(crate) fn new(site: &Site, cable: usize, most_points: usize) -> anyhow::Result<Self> {
+        let described = &site.cables[cable];
+        let instrument = &site.instruments[described.instrument];
+        let bands = bands(described, instrument);
+        let segments = signal::plan_segments(&bands, most_points);
+        let sweep = SweepPlan {
+            input: described.input,
+            segments: segments.iter().map(|segment| told(segment, &bands[segment.band], instrument)).collect(),
+            settle: instrument.settle.to_duration(),
+        };
+        Ok(Self {
+            cable,
+            every: described.every.unwrap_or(EVERY),
+            sweep,
+            band_of: segments.iter().map(|segment| segment.band).collect(),
+            bands,
+            chain: chain(described)?,
+            receiver: receiver(instrument),
+        })
+    }
+
+    /// The level of each band from an answer; `None` where nothing of a band was measured.
+    pub(crate) fn levels(&self, answer: &SweepAnswer) -> Vec<Option<signal::BandLevel>> {
+        let mut given = Quality::GOOD;
+        if !answer.settings.assumed().is_empty() {
+            given.reason = Some(Reason::Assumed);
+        }
+        if answer.overload == Some(true) {
+            given = given.worse(Quality::bad(Reason::Overload));
+        }
+        let of_band = |index: usize| {
+            let traces: Vec<signal::Trace<'_>> = (0..self.band_of.len())
+                .filter(|segment| self.band_of[*segment] == index)
+                .map(|segment| signal::Trace {
+                    start_hz: self.sweep.segments[segment].start_hz,
+                    stop_hz: self.sweep.segments[segment].stop_hz,
+                    unit: answer.unit,
+                    values: &answer.segments[segment],
+                })
+                .collect();
+            signal::band_level(&traces, &self.chain, &self.bands[index], &self.receiver, given)
+        };
+        (0..self.bands.len()).map(of_band).collect()
+    }
+}
+
+fn told(segment: &signal::Segment, band: &signal::Band, instrument: &Instrument) -> Segment {
+    Segment {
+        start_hz: segment.start_hz,
+        stop_hz: segment.stop_hz,
+        points: u32::try_from(segment.points).unwrap_or(u32::MAX),
+        rbw_hz: band.rbw_hz,
+        shape: band.shape,
+        vbw_hz: Some(VIDEO_RATIO * band.rbw_hz),
+        detector: band.detector,
+        dwell_s: instrument.dwell.as_secs_f64(),
+    }
+}
+
+fn bands(cable: &Cable, instrument: &Instrument) -> Vec<signal::Band> {
+    let band = |band: &hushwatch_config::site::Band| signal::Band {
+        from_hz: band.from_hz,
+        to_hz: band.to_hz,
+        rbw_hz: band.rbw_hz,
+        shape: instrument.shape,
+        detector: band.detector,
+        exclude: band.exclude.clone(),
+    };
+    cable.bands.iter().map(band).collect()
+}
+
+fn chain(cable: &Cable) -> anyhow::Result<signal::CorrectionChain> {
+    let curve = |points: &[(f64, f64)]| {
+        if points.is_empty() { Ok(signal::Curve::flat(0.0)) } else { signal::Curve::new(points.to_vec()) }
+    };
+    Ok(signal::CorrectionChain {
+        kind: match cable.probe.kind {
+            ProbeKind::Current => signal::ProbeKind::Current,
+            ProbeKind::Loop => signal::ProbeKind::Loop,
+            ProbeKind::Direct => signal::ProbeKind::Direct,
+        },
+        factor: curve(&cable.probe.factor)?,
+        path_loss: curve(&cable.probe.path_loss)?,
+    })
+}
+
+fn receiver(instrument: &Instrument) -> signal::Receiver {
+    signal::Receiver {
+        floor: instrument.floor.map(|floor| match floor {
+            Floor::NoiseFigureDb(db) => signal::Floor::NoiseFigureDb(db),
+            Floor::DbmPerHz(dbm) => signal::Floor::DbmPerHz(dbm),
+        }),
+        overload_dbuv: instrument.overload_dbuv,
+    }
+}
