@@ -7,7 +7,6 @@ use ratatui::style::Color;
 use ratatui::symbols::Marker;
 use ratatui::widgets::Widget;
 use ratatui::widgets::canvas::{Canvas, Context, Line as Stroke, Points};
-use std::fmt::Write as _;
 
 use crate::{LineKind, MarkKind, Trend};
 
@@ -54,7 +53,7 @@ impl Trend {
         let mut text = format!("{}\n", self.title);
         for row in 0..height {
             let label = self.level_label(row, height, low, high);
-            let _ = write!(text, "{label:>6} \u{2502}");
+            text.push_str(&format!("{label:>6} \u{2502}"));
             text.push_str(painted(&buffer, row, width).trim_end());
             text.push('\n');
         }
@@ -153,7 +152,7 @@ impl Trend {
             .collect();
         let mut text = format!("        {} {}\n", lines, self.axis.caption);
         for mark in marks {
-            let _ = write!(text, "        {mark}\n");
+            text.push_str(&format!("        {mark}\n"));
         }
         text
     }
@@ -169,7 +168,7 @@ fn painted(buffer: &Buffer, row: u16, width: u16) -> String {
         let symbol = if cell.symbol() == "\u{2800}" { " " } else { cell.symbol() };
         if cell.fg != current && symbol != " " {
             if current != Color::Reset {
-                let _ = write!(text, "{:#}", ansi(current));
+                text.push_str(&format!("{:#}", ansi(current)));
             }
             text.push_str(&ansi(cell.fg).to_string());
             current = cell.fg;

@@ -3,7 +3,6 @@
 use anstyle::Style;
 use comfy_table::presets::NOTHING;
 use comfy_table::{CellAlignment, ContentArrangement, Table};
-use std::fmt::Write as _;
 
 /// A cell: its text, how it is shown, and on which side it stands.
 #[derive(Clone, Debug, Default)]
@@ -83,7 +82,7 @@ fn paint(text: &str, rows: &[Vec<Cell>]) -> String {
             if let Some(at) = rest.find(cell.text.as_str()) {
                 let (before, after) = rest.split_at(at);
                 painted.push_str(before);
-                let _ = write!(painted, "{}{}{}", cell.style.render(), cell.text, cell.style.render_reset());
+                painted.push_str(&format!("{}{}{}", cell.style.render(), cell.text, cell.style.render_reset()));
                 rest = &after[cell.text.len()..];
             }
         }
