@@ -94,12 +94,12 @@ impl Device {
     /// There is no pseudo-terminal to be had.
     pub fn replug(&mut self) {
         self.turn().unplugged = false;
-        let master = openpt(OpenptFlags::RDWR | OpenptFlags::NOCTTY).expect("a pseudo-terminal");
+        let master = openpt(OpenptFlags::RDWR | OpenptFlags::NOCTTY | OpenptFlags::CLOEXEC).expect("a pseudo-terminal");
         grantpt(&master).expect("grantpt");
         unlockpt(&master).expect("unlockpt");
         let name = ptsname(&master, Vec::new()).expect("its name").into_string().expect("UTF-8");
         // Kept open and raw: a terminal starts with echo, and hangs up whenever its last reader leaves.
-        let slave = rustix::fs::open(&name, OFlags::RDWR | OFlags::NOCTTY, Mode::empty()).expect("its other end");
+        let slave = rustix::fs::open(&name, OFlags::RDWR | OFlags::NOCTTY | OFlags::CLOEXEC, Mode::empty()).expect("its other end");
         let mut raw = tcgetattr(&slave).expect("its settings");
         raw.make_raw();
         tcsetattr(&slave, OptionalActions::Now, &raw).expect("raw");
