@@ -90,7 +90,8 @@ fn acknowledge(context: &Context, ack: &Ack) -> Outcome {
     Ok(ExitCode::SUCCESS)
 }
 
-fn list(context: &Context, all: bool) -> Outcome {
+/// Lists the open alarms, or all that ever were.
+pub(crate) fn list(context: &Context, all: bool) -> Outcome {
     let opened = context.open()?;
     let (alarms, now) = opened.at_once(|read| Ok((read.alarms(!all)?, opened.plant_now(read)?)))?;
     if context.json {

@@ -159,6 +159,7 @@ struct Head<'a> {
 }
 
 #[derive(Serialize)]
+#[expect(clippy::struct_field_names, reason = "they are the names of the columns")]
 struct Level<'a> {
     time: String,
     cable: &'a str,

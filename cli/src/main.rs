@@ -65,6 +65,10 @@ enum Command {
     Reference(reference::Arguments),
     /// Levels, alarms or gaps for other programs
     Export(export::Arguments),
+    /// A simulated cabinet from start to finish, in about a minute
+    Demo(demo::Arguments),
+    /// Only the simulated receiver, on a pseudo-terminal
+    Simulate(simulate::Arguments),
 }
 
 fn main() -> ExitCode {
@@ -83,6 +87,8 @@ fn main() -> ExitCode {
         Command::Alarms(command) => alarms::run(&context, &command),
         Command::Reference(command) => reference::run(&context, &command),
         Command::Export(command) => export::run(&context, &command),
+        Command::Demo(command) => demo::run(&command),
+        Command::Simulate(command) => simulate::run(&command),
     };
     outcome.unwrap_or_else(Failure::told)
 }

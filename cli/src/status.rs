@@ -23,7 +23,7 @@ use crate::written::{WrittenAlarm, hundredths};
 const ALARMED: u8 = 1;
 
 /// How does everything stand?
-#[derive(Args)]
+#[derive(Args, Default)]
 pub(crate) struct Arguments {
     /// Each band in each operating state, with the reason of its verdict
     #[arg(long, short)]

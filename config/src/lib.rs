@@ -9,3 +9,11 @@ pub mod faults;
 pub mod scene;
 pub mod site;
 pub mod walk;
+
+/// Date and time of day at a place.
+pub type LocalTime = jiff::civil::DateTime;
+
+/// Date and time of day of a zone. Times outside the years -9999 to 9999 are taken as 1970.
+pub fn local_time(zone: &jiff::tz::TimeZone, time: hushwatch_quantity::Time) -> LocalTime {
+    zone.to_datetime(jiff::Timestamp::from_microsecond(time.as_micros()).unwrap_or_default())
+}

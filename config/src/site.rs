@@ -9,12 +9,12 @@ mod cable;
 mod choke;
 mod cross;
 mod instrument;
-mod points;
+pub(crate) mod points;
 mod probe;
 mod recipient;
 mod settings;
 mod shelf;
-mod states;
+pub(crate) mod states;
 
 use std::path::{Path, PathBuf};
 use std::sync::Arc;
@@ -88,7 +88,7 @@ impl Site {
 
     /// Date and time of day in the site's zone. Times outside the years -9999 to 9999 are taken as 1970.
     pub fn local(&self, time: Time) -> DateTime {
-        self.zone.to_datetime(jiff::Timestamp::from_microsecond(time.as_micros()).unwrap_or_default())
+        crate::local_time(&self.zone, time)
     }
 
     /// The operating state at a time, if the site file alone tells it: without operating states, or by calendar.

@@ -12,7 +12,7 @@ use crate::faults::{Fault, Faults, Source};
 use crate::walk::{Dimension, FREQUENCY, Value};
 
 /// Pairs of frequency (Hz) and value, of strictly rising frequency, two at least.
-pub(super) type Points = Vec<(f64, f64)>;
+pub(crate) type Points = Vec<(f64, f64)>;
 
 /// The frequencies over which a value that does not depend on frequency is given, Hz.
 pub(super) const EVERYWHERE: (f64, f64) = (1.0, 1e12);
@@ -23,7 +23,7 @@ pub(super) fn flat(value: f64) -> Points {
 }
 
 /// A table in the file, `[["150 kHz", 2.0], ...]`, or one value for all frequencies.
-pub(super) fn read_table(value: Value<'_>, dimension: &'static Dimension) -> Option<Points> {
+pub(crate) fn read_table(value: Value<'_>, dimension: &'static Dimension) -> Option<Points> {
     if !value.is_list() {
         return value.quantity(dimension).map(flat);
     }

@@ -164,7 +164,7 @@ enum From {
     Manual,
 }
 
-pub(super) fn read(root: &Table<'_>, base: &Path) -> Option<OperatingStates> {
+pub(crate) fn read(root: &Table<'_>, base: &Path) -> Option<OperatingStates> {
     root.read_or("operating_states", OperatingStates::Untold, |value| {
         value.table(|table| {
             let sources = [("calendar", From::Calendar), ("file", From::File), ("manual", From::Manual)];
