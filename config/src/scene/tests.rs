@@ -28,8 +28,8 @@ fn all_that_is_wrong_is_told() {
         ("start    = \"2026-08-31T22:00:00Z\"", "start    = \"yesterday\"", "is no time"),
         ("input       = 3", "input       = 1", "the same tag or input"),
         ("impedance   = \"18 ohm\"", "impedance   = \"18 V\"", "ohm"),
-        ("step        = \"0.6 V\"", "stepp       = \"0.6 V\"", "did you mean `step`"),
-        ("rise        = \"180 ns\"", "rise        = \"180 ns\"\nnode = \"rack\"", "no cable and no link begins"),
+        ("step        = \"3.6 V\"", "stepp       = \"3.6 V\"", "did you mean `step`"),
+        ("rise        = \"30 ns\"", "rise        = \"30 ns\"\nnode = \"rack\"", "no cable and no link begins"),
         ("format = 1", "format = 9", "of format 9"),
     ] {
         assert!(text.contains(from), "{from}");

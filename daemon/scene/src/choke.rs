@@ -79,4 +79,34 @@ mod tests {
         let z = impedance(&choke, &material, 0.0, 1e8, 25.0);
         assert!(z.re > 5.0 * z.im.abs(), "{z}");
     }
+
+    #[test]
+    fn inductances_of_cores_as_they_are_published() {
+        // core_inductance.csv: L = mu0 mu N^2 h ln(OD/ID) / (2 pi).
+        let mut rows =
+            csv::Reader::from_path(concat!(env!("CARGO_MANIFEST_DIR"), "/../../tests/reference/core_inductance.csv"))
+                .expect("the table");
+        let mut checked = 0;
+        for row in rows.records().map(|row| row.expect("a row")) {
+            let sizes = row[0].split(' ').nth(1).expect("sizes");
+            let mm: Vec<f64> = sizes.split('/').map(|size| size.parse::<f64>().expect("mm") * 1e-3).collect();
+            let choke = Choke {
+                material: "m".into(),
+                outer_m: mm[0],
+                inner_m: mm[1],
+                length_m: mm[2],
+                gap_m: 0.0,
+                turns: row[1].parse().expect("turns"),
+                cores: 1,
+                fitted: true,
+            };
+            let mu: f64 = row[2].parse().expect("mu");
+            let material = Material { name: "m".into(), mu, relaxation_hz: 1e12, per_kelvin: 0.0 };
+            let (hz, expected) = (1e4, row[3].parse::<f64>().expect("uH") * 1e-6);
+            let got = impedance(&choke, &material, 0.0, hz, 25.0).im / (TAU * hz);
+            assert!((got / expected - 1.0).abs() < 1e-5, "{row:?}: {got:e}");
+            checked += 1;
+        }
+        assert!(checked > 5, "{checked} rows");
+    }
 }

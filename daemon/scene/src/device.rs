@@ -16,6 +16,12 @@ const MOST_ERRORS: usize = 16;
 /// A line may be so long.
 const LONGEST_LINE: usize = 1024;
 
+/// Where it can be tuned to, Hz.
+const LOWEST_HZ: f64 = 1e3;
+
+/// Up to where it can be tuned, Hz.
+const HIGHEST_HZ: f64 = 1e9;
+
 /// From dBm to dB(uV) in 50 ohm.
 const DBM_TO_DBUV: f64 = 106.990;
 
@@ -93,6 +99,7 @@ const MISSING: Wrong = (-109, "Missing parameter");
 const DATA_TYPE: Wrong = (-104, "Data type error");
 const OUT_OF_RANGE: Wrong = (-222, "Data out of range");
 const ILLEGAL: Wrong = (-224, "Illegal parameter value");
+const STALE: Wrong = (-230, "Data corrupt or stale");
 const TOO_LONG: Wrong = (-363, "Input buffer overrun");
 
 /// The receiver.
@@ -258,6 +265,10 @@ impl Device {
             format!("{:E}", set.start_hz)
         } else if is("[SENSe:]FREQuency:STOP", header) {
             format!("{:E}", set.stop_hz)
+        } else if is("[SENSe:]FREQuency:CENTer", header) {
+            format!("{:E}", f64::midpoint(set.start_hz, set.stop_hz))
+        } else if is("[SENSe:]FREQuency:SPAN", header) {
+            format!("{:E}", set.stop_hz - set.start_hz)
         } else if is("[SENSe:]SWEep:POINts", header) {
             set.points.to_string()
         } else if is("[SENSe:]SWEep:TIME", header) {
@@ -266,6 +277,11 @@ impl Device {
             format!("{:E}", set.rbw_hz)
         } else if is("[SENSe:]BANDwidth:VIDeo", header) {
             format!("{:E}", set.vbw_hz)
+        } else if is("[SENSe:]BANDwidth:SHAPe", header) {
+            // Named by its 6 dB width; it has no other one.
+            String::from("GAUS")
+        } else if is("ROUTe:CLOSe", header) {
+            format!("(@{})", set.input)
         } else if is("[SENSe:]DETector[:FUNCtion]", header) {
             set.detector.to_owned()
         } else if is("INPut:ATTenuation", header) {
@@ -333,9 +349,9 @@ impl Device {
         let set = &mut self.settings;
         // Each with its limits.
         let (place, low, high): (&mut f64, f64, f64) = if is("[SENSe:]FREQuency:STARt", header) {
-            (&mut set.start_hz, 1e3, 1e9)
+            (&mut set.start_hz, LOWEST_HZ, HIGHEST_HZ)
         } else if is("[SENSe:]FREQuency:STOP", header) {
-            (&mut set.stop_hz, 1e3, 1e9)
+            (&mut set.stop_hz, LOWEST_HZ, HIGHEST_HZ)
         } else if is("[SENSe:]BANDwidth[:RESolution]", header) {
             (&mut set.rbw_hz, 10.0, 10e6)
         } else if is("[SENSe:]BANDwidth:VIDeo", header) {
@@ -348,6 +364,17 @@ impl Device {
         } else if is("[SENSe:]SWEep:POINts", header) {
             let points = number_of(parameter)?;
             set.points = (points.clamp(2.0, most_points as f64)) as usize;
+            return Ok(());
+        } else if is("[SENSe:]FREQuency:CENTer", header) || is("[SENSe:]FREQuency:SPAN", header) {
+            let value = number_of(parameter)?;
+            let (center, span) = (f64::midpoint(set.start_hz, set.stop_hz), set.stop_hz - set.start_hz);
+            let of_span = is("[SENSe:]FREQuency:SPAN", header);
+            let (center, span) = if of_span { (center, value) } else { (value, span) };
+            let (start, stop) = (center - span / 2.0, center + span / 2.0);
+            if span < 0.0 || start < LOWEST_HZ || stop > HIGHEST_HZ {
+                return Err(OUT_OF_RANGE);
+            }
+            (set.start_hz, set.stop_hz) = (start, stop);
             return Ok(());
         } else {
             return Err(UNDEFINED);
@@ -395,6 +422,9 @@ impl Device {
         }
         if !parameter.eq_ignore_ascii_case("TRACE1") {
             return Err(ILLEGAL);
+        }
+        if self.trace_dbuv.is_empty() {
+            return Err(STALE);
         }
         let shift = if self.settings.dbuv { 0.0 } else { DBM_TO_DBUV };
         let values = self.trace_dbuv.iter().map(|dbuv| dbuv - shift);
@@ -458,7 +488,10 @@ mod tests {
             ("SWE:POIN 100000;POIN?", "1001"),
             ("INP:ATT 10;ATT?;ATT:AUTO?", "10;0"),
             ("UNIT:POW DBUV;POW?", "DBUV"),
-            ("ROUT:CLOS (@2)", ""),
+            ("ROUT:CLOS (@2);CLOS?", "(@2)"),
+            ("BAND:SHAP?", "GAUS"),
+            ("FREQ:CENT 5 MHZ;SPAN 2E6;STAR?;STOP?", "4E6;6E6"),
+            ("sense:frequency:center?;span?", "5E6;2E6"),
             ("FORM ASC;FORM?", "ASC,0"),
             ("SYST:ERR?", "0,\"No error\""),
             ("FREQ:STAR", ""),
@@ -466,11 +499,15 @@ mod tests {
             ("FREQ:STAR 1E12", ""),
             ("FROB:NICATE 3", ""),
             ("TRAC? TRACE9", ""),
+            ("FREQ:SPAN 1E8", ""),
+            ("TRAC? TRACE1", ""),
             ("SYST:ERR?", "-109,\"Missing parameter\""),
             ("SYST:ERR?", "-104,\"Data type error\""),
             ("SYST:ERR?", "-222,\"Data out of range\""),
             ("SYSTEM:ERROR:NEXT?", "-113,\"Undefined header\""),
             ("SYST:ERR?", "-224,\"Illegal parameter value\""),
+            ("SYST:ERR?", "-222,\"Data out of range\""),
+            ("SYST:ERR?", "-230,\"Data corrupt or stale\""),
             ("SYST:ERR?", "0,\"No error\""),
         ] {
             assert_eq!(ask(&mut device, line), answer, "{line}");
@@ -495,7 +532,7 @@ mod tests {
         }
         let after = ask(&mut device, "SYST:CLOC?");
         let time = |text: &str| Time::parse_rfc3339(text).expect(text);
-        assert_eq!(time(&after) - time(&before), Span::from_mins(4));
+        assert_eq!(time(&after) - time(&before), Span::from_mins(3));
     }
 
     #[test]

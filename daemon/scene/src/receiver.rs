@@ -120,7 +120,7 @@ impl Drop for SimulatedReceiver {
             // It ended by itself or by a panic that has been told.
             let _ = thread.join();
         }
-        let _ = std::fs::remove_file(&self.link);
+        remove_link(&self.link);
     }
 }
 
@@ -210,7 +210,11 @@ impl Worker {
 
     /// What has come; nothing after a while without anything.
     fn read(&mut self, buffer: &mut [u8]) -> std::io::Result<usize> {
-        let Some(port) = &mut self.port else { return Ok(0) };
+        let Some(port) = &mut self.port else {
+            // There was no terminal to plug in again: nothing can come, and asking on and on would take a whole core.
+            std::thread::sleep(LOOK);
+            return Ok(0);
+        };
         if !ready(&port.master, PollFlags::IN)? {
             return Ok(0);
         }
@@ -273,7 +277,7 @@ impl Worker {
         };
         let real = if self.lockstep { OUTAGE } else { lasts.to_duration() };
         if unplugged {
-            let _ = std::fs::remove_file(&self.link);
+            remove_link(&self.link);
             self.port = None;
         }
         self.sleep_until(self.started.elapsed() + real);
@@ -296,6 +300,13 @@ impl Worker {
         let mut buffer = [0; 4096];
         while matches!(self.read(&mut buffer), Ok(1..)) {}
         self.device.power_cycle();
+    }
+}
+
+/// Takes the link away. What somebody else has put there meanwhile is no link and is left alone.
+fn remove_link(path: &Path) {
+    if std::fs::symlink_metadata(path).is_ok_and(|found| found.file_type().is_symlink()) {
+        let _ = std::fs::remove_file(path);
     }
 }
 
@@ -340,7 +351,7 @@ mod tests {
         let trace = ask(&link, "FREQ:STAR 2E6;STOP 1E7;:SWE:POIN 81;:INIT;:TRAC? TRACE1");
         assert_eq!(trace.split(',').count(), 81);
         assert_eq!(ask(&link, "*OPC?"), "1");
-        assert_eq!(receiver.plant_time() - before, Span::from_mins(4));
+        assert_eq!(receiver.plant_time() - before, Span::from_mins(3));
         drop(receiver);
         assert!(std::fs::symlink_metadata(&link).is_err());
     }
@@ -356,12 +367,23 @@ mod tests {
     }
 
     #[test]
+    fn what_came_there_later_is_left_alone_too() {
+        let folder = tempfile::tempdir().expect("a folder");
+        let link = folder.path().join("rx1");
+        let receiver = SimulatedReceiver::start(scene(), Options { link: link.clone(), pace: false }).expect("in");
+        std::fs::remove_file(&link).expect("the link goes");
+        std::fs::write(&link, "dear aunt").expect("written");
+        drop(receiver);
+        assert_eq!(std::fs::read_to_string(&link).expect("still there"), "dear aunt");
+    }
+
+    #[test]
     fn unplugged_and_plugged_in_again_under_the_same_name() {
         let folder = tempfile::tempdir().expect("a folder");
         let link = folder.path().join("rx1");
         let mut scene = scene();
         let what = hushwatch_config::scene::What::Unplugged { lasts: Span::from_hours(2) };
-        scene.events = vec![hushwatch_config::scene::Event { at: Span::from_mins(3), what }];
+        scene.events = vec![hushwatch_config::scene::Event { at: Span::from_mins(2), what }];
         let receiver = SimulatedReceiver::start(scene, Options { link: link.clone(), pace: false }).expect("in");
         let before = receiver.plant_time();
         let mut file = File::options().read(true).write(true).open(&link).expect("the port opens");
@@ -373,7 +395,7 @@ mod tests {
             std::thread::sleep(Duration::from_millis(20));
         }
         assert_eq!(ask(&link, "*IDN?"), "Simulated,RX-2044,417,1.0");
-        assert_eq!(receiver.plant_time() - before, Span::from_mins(124));
+        assert_eq!(receiver.plant_time() - before, Span::from_mins(123));
     }
 
     #[test]

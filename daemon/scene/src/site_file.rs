@@ -40,11 +40,13 @@ pub fn site_file(scene: &Scene, port: &Path) -> String {
             table(&cable.path_loss)
         );
     }
-    for (name, from, to) in [("low", "500 kHz", "2 MHz"), ("ringing", "2 MHz", "10 MHz"), ("high", "10 MHz", "30 MHz")]
-    {
+    for (name, from, to, rbw) in [
+        ("low", "500 kHz", "2 MHz", "100 kHz"),
+        ("ringing", "2 MHz", "10 MHz", "100 kHz"),
+        ("high", "10 MHz", "30 MHz", "400 kHz"),
+    ] {
         let exclude =
             if name == "ringing" { "\nexclude  = [[\"5.9 MHz\", \"6.25 MHz\"]]     # a broadcast band" } else { "" };
-        let rbw = if name == "high" { "400 kHz" } else { "100 kHz" };
         let _ = write!(
             text,
             "\n[[band]]\nname     = \"{name}\"\nfrom     = \"{from}\"\nto       = \"{to}\"\nrbw      = \"{rbw}\"\

@@ -136,4 +136,32 @@ mod tests {
         let drop = peak(3e7) - peak(3e8);
         assert!((drop - 20.0).abs() < 1.0, "20 dB more: {drop}");
     }
+
+    #[test]
+    fn lines_of_a_trapezoid_as_they_are_published() {
+        // trapezoid_spectrum.csv: Fourier series of a trapezoid with equal edges. There the width is fixed, here it
+        // varies: sin^2(n pi D) of each row stands in for its mean of one half.
+        let mut rows = csv::Reader::from_path(concat!(
+            env!("CARGO_MANIFEST_DIR"),
+            "/../../tests/reference/trapezoid_spectrum.csv"
+        ))
+        .expect("the table");
+        let mut checked = 0;
+        for row in rows.records().map(|row| row.expect("a row")) {
+            let value = |column: usize| row[column].parse::<f64>().unwrap_or(f64::NAN);
+            let (step_v, carrier_hz, duty, rise_ns, n) = (value(0), value(1), value(2), value(3), value(4));
+            let amplitude = value(6);
+            let share = (n * PI * duty).sin().powi(2);
+            if share < 1e-6 {
+                continue;
+            }
+            let (rise_s, ring_hz) = (rise_ns * 1e-9, 1e3);
+            let kind = SourceKind::Drive { step_v, carrier_hz, rise_s, ring_hz, ring_q: 1.0, ring_db: 0.0 };
+            let expected = amplitude * amplitude / 2.0;
+            let got = drive_line(&kind, n) * share / 0.5;
+            assert!((got / expected - 1.0).abs() < 1e-5, "D {duty}, n {n}: {got:e} instead of {expected:e}");
+            checked += 1;
+        }
+        assert!(checked > 10, "{checked} rows");
+    }
 }
