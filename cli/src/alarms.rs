@@ -4,7 +4,7 @@ use std::io::Write;
 use std::process::ExitCode;
 
 use clap::{Args, Subcommand, ValueEnum};
-use hushwatch_alarm::{Alarm, CAUTION};
+use hushwatch_alarm::{Alarm, CAUTION, Place};
 use hushwatch_config::site::Site;
 use hushwatch_control::{Acknowledge, Client, Request};
 use hushwatch_quantity::Time;
@@ -90,6 +90,15 @@ fn acknowledge(context: &Context, ack: &Ack) -> Outcome {
     Ok(ExitCode::SUCCESS)
 }
 
+/// Where a rise shows, the strongest first; else what is wrong in a sentence.
+fn what(alarm: &Alarm) -> String {
+    let place = |place: &Place| format!("{} ({})", place.band, place.state);
+    match alarm.detail.places.as_slice() {
+        [] => alarm.detail.text.clone(),
+        places => places.iter().map(place).collect::<Vec<_>>().join(", "),
+    }
+}
+
 /// Lists the open alarms, or all that ever were.
 pub(crate) fn list(context: &Context, all: bool) -> Outcome {
     let opened = context.open()?;
@@ -120,11 +129,11 @@ fn write(site: &Site, alarms: &[Alarm], now: Time, all: bool) -> Result<(), Fail
             Cell::new(alarm.state.label()),
             Cell::number(alarm.detail.rise_db().map_or_else(String::new, |rise| format!("{rise:+.1} dB"))),
             Cell::new(format!("{} ({})", local(site, since), ago(now, since))),
-            Cell::new(&alarm.detail.text),
+            Cell::new(what(alarm)),
         ]
     };
     let rows: Vec<Vec<Cell>> = alarms.iter().map(row).collect();
-    let header = ["no.", "kind", "of", "state", "rise", "since", "what"];
+    let header = ["no.", "kind", "of", "state", "rise", "since", "where"];
     out.write_all(table(&header, &rows, width()).as_bytes())?;
     let mut kinds: Vec<_> = alarms.iter().map(|alarm| alarm.key.kind).collect();
     kinds.dedup();

@@ -8,7 +8,9 @@ use std::path::PathBuf;
 use std::process::ExitCode;
 
 use clap::Args;
-use hushwatch_config::site::{self, Cable, ChokeMake, Instrument, OperatingStates, ProbeKind, RecipientKind, Site};
+use hushwatch_config::site::{
+    self, Cable, ChokeMake, Clock, Instrument, OperatingStates, ProbeKind, RecipientKind, Site,
+};
 use hushwatch_quantity::Span;
 use serde::Serialize;
 
@@ -126,13 +128,14 @@ fn in_words_instrument(site: &Site, index: usize, instrument: &Instrument, budge
     let of_this = || site.cables.iter().zip(budgets).filter(|(cable, _)| cable.instrument == index);
     let busy: f64 = of_this().map(|(_, budget)| budget.whole_s()).sum();
     let asked: f64 = of_this().map(|(_, budget)| budget.whole_s() / budget.every_s).sum();
-    let round = Span::from_secs_f64(busy);
-    if asked <= 1.0 {
+    let round = Span::from_millis((busy * 1e3).round() as i64);
+    if instrument.clock == Clock::Instrument {
+        text.push_str("  it keeps the time itself: cables come in turn, as fast as it answers\n");
+    } else if asked <= 1.0 {
         text.push_str(&format!("  once round all cables takes {round}: it keeps up ({:.0} % busy)\n", 100.0 * asked));
     } else {
         text.push_str(&format!(
-            "  IT DOES NOT KEEP UP: what `every` asks for takes {:.0} % of the time; each cable comes every {round} instead\n",
-            100.0 * asked
+            "  IT DOES NOT KEEP UP: `every` asks for {asked:.1} times what the line can do; each cable comes every {round} instead\n"
         ));
         text.push_str(
             "  (fewer points by wider `rbw` or narrower bands, a shorter `dwell`, or a longer `every` help)\n",

@@ -69,9 +69,11 @@ pub(crate) fn run(arguments: &Arguments) -> Outcome {
     anstream::stdout().lock().write_all(picture.to_text(size).as_bytes())?;
     std::fs::write(folder.join(format!("{cable}.svg")), picture.to_svg())?;
     export::levels_csv(&opened, BufWriter::new(File::create(folder.join("levels.csv"))?))?;
+    // A reader that looks on would keep the log beside the record from being cleared away.
+    drop(opened);
     service.stop()?;
     drop(receiver);
-    conclude(&opened, &scene, &suspect, &folder)
+    conclude(&context.open()?, &scene, &suspect, &folder)
 }
 
 /// A folder that is not there yet.

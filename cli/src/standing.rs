@@ -1,10 +1,10 @@
 //! How each band of each cable stands, from what the record holds: what `status` and `trend` tell.
 
 use hushwatch_alarm::{Alarm, AlarmKind, AlarmState, Place};
-use hushwatch_config::site::{Cable, Site};
+use hushwatch_config::site::{Cable, Clock, Site};
 use hushwatch_drift::{ChartState, ReferenceFigure, ReferenceKind, Standing, Verdict, VerdictInput, standing, verdict};
 use hushwatch_quantity::{Quality, Span, Time};
-use hushwatch_record::{Filter, GapRow, LevelRow, Read, RecordError, ReferenceRow, SeriesRow};
+use hushwatch_record::{GapRow, LevelRow, Read, RecordError, ReferenceRow, SeriesRow};
 
 /// How many closed blocks make up "now": enough for a median that a burst does not move.
 const NOW_BLOCKS: usize = 12;
@@ -31,6 +31,8 @@ pub(crate) struct CableStanding {
     pub(crate) latest: Option<LevelRow>,
     /// Is that too old to say anything about now?
     pub(crate) stale: bool,
+    /// Is a choke described for it?
+    pub(crate) has_choke: bool,
 }
 
 /// How a band of a cable stands in an operating state.
@@ -63,14 +65,15 @@ pub(crate) fn picture(site: &Site, read: Read<'_>, now: Time) -> Result<Picture,
         states: read.states()?,
         references: read.references()?,
         alarms: read.alarms(true)?,
+        gaps: read.open_gaps()?,
     };
     let mut cables = Vec::new();
     for cable in &site.cables {
-        cables.push(looked.cable(cable, read, now)?);
+        // Where the instrument keeps the time, nobody knows how late it is: there a gap alone tells.
+        let keeps_time = site.instrument(cable).is_some_and(|one| one.clock == Clock::Instrument);
+        cables.push(looked.cable(cable, read, if keeps_time { None } else { Some(now) })?);
     }
-    let gaps = read.gaps(&Filter { from: Some(now), ..Filter::default() })?;
-    let gaps = gaps.into_iter().filter(|gap| gap.to.is_none()).collect();
-    Ok(Picture { now, cables, alarms: looked.alarms, gaps, size: read.size()? })
+    Ok(Picture { now, cables, alarms: looked.alarms, gaps: looked.gaps, size: read.size()? })
 }
 
 /// What is read once for all cables.
@@ -79,10 +82,11 @@ struct Looked {
     states: Vec<(u32, String)>,
     references: Vec<ReferenceRow>,
     alarms: Vec<Alarm>,
+    gaps: Vec<GapRow>,
 }
 
 impl Looked {
-    fn cable(&self, cable: &Cable, read: Read<'_>, now: Time) -> Result<CableStanding, RecordError> {
+    fn cable(&self, cable: &Cable, read: Read<'_>, now: Option<Time>) -> Result<CableStanding, RecordError> {
         let mut latest: Option<LevelRow> = None;
         let mut places = Vec::new();
         for band in &cable.bands {
@@ -90,7 +94,7 @@ impl Looked {
             // A probe of another kind makes another series: the newest one counts.
             let Some(series) = self.series.iter().rfind(of_band) else { continue };
             let newest = read.latest_level(series.id)?;
-            let stale = newest.as_ref().is_none_or(|level| is_stale(cable, level.time, now));
+            let stale = newest.as_ref().is_none_or(|level| self.is_stale(cable, level.time, now));
             for state in read.states_of(series.id)? {
                 places.push(self.place(cable, series, state, stale, read)?);
             }
@@ -99,8 +103,15 @@ impl Looked {
             }
         }
         places.sort_by(|a, b| rank(a).cmp(&rank(b)).then(b.lost_db().total_cmp(&a.lost_db())));
-        let stale = latest.as_ref().is_none_or(|level| is_stale(cable, level.time, now));
-        Ok(CableStanding { tag: cable.tag.clone(), description: cable.description.clone(), places, latest, stale })
+        let stale = latest.as_ref().is_none_or(|level| self.is_stale(cable, level.time, now));
+        Ok(CableStanding {
+            tag: cable.tag.clone(),
+            description: cable.description.clone(),
+            places,
+            latest,
+            stale,
+            has_choke: cable.choke.is_some(),
+        })
     }
 
     fn place(
@@ -152,6 +163,13 @@ impl Looked {
         })
     }
 
+    /// Is the last level of a cable too old to say anything about now?
+    fn is_stale(&self, cable: &Cable, time: Time, now: Option<Time>) -> bool {
+        let every = cable.every.unwrap_or(Span::from_secs(10)).as_micros();
+        let patience = Span::from_micros(every.saturating_mul(STALE_TURNS)).max(Span::from_mins(1));
+        self.gaps.iter().any(|gap| gap.cable == cable.tag) || now.is_some_and(|now| now - time > patience)
+    }
+
     fn regression_stands(&self, cable: &Cable, series: &SeriesRow, state: &str) -> bool {
         let here = |place: &Place| place.band == series.band && place.state == state;
         self.alarms.iter().any(|alarm| {
@@ -178,10 +196,4 @@ fn rank(place: &PlaceStanding) -> u8 {
         Verdict::Holding => 2,
         Verdict::Unproven => 3,
     }
-}
-
-fn is_stale(cable: &Cable, time: Time, now: Time) -> bool {
-    let every = cable.every.unwrap_or(Span::from_secs(10)).as_micros();
-    let patience = Span::from_micros(every.saturating_mul(STALE_TURNS)).max(Span::from_mins(1));
-    now - time > patience
 }

@@ -165,9 +165,9 @@ impl Keeper {
         self.writer.commit()
     }
 
-    fn stop(&mut self) -> Result<(), RecordError> {
+    fn stop(mut self) -> Result<(), RecordError> {
         self.writer.remember(start::STOPPED, Some(&clock::now().to_string()))?;
-        self.commit()?;
+        self.writer.close()?;
         tracing::info!("everything is recorded");
         Ok(())
     }

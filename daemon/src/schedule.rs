@@ -47,7 +47,7 @@ impl Schedule {
             turn.due = latest.unwrap_or(started) + Span::from_micros(1);
         } else {
             let regular = turn.due + turn.every;
-            turn.due = if regular + turn.every <= started { started + turn.every } else { regular };
+            turn.due = if regular <= started { started + turn.every } else { regular };
         }
     }
 }

@@ -99,7 +99,8 @@ impl Device {
         unlockpt(&master).expect("unlockpt");
         let name = ptsname(&master, Vec::new()).expect("its name").into_string().expect("UTF-8");
         // Kept open and raw: a terminal starts with echo, and hangs up whenever its last reader leaves.
-        let slave = rustix::fs::open(&name, OFlags::RDWR | OFlags::NOCTTY | OFlags::CLOEXEC, Mode::empty()).expect("its other end");
+        let slave = rustix::fs::open(&name, OFlags::RDWR | OFlags::NOCTTY | OFlags::CLOEXEC, Mode::empty())
+            .expect("its other end");
         let mut raw = tcgetattr(&slave).expect("its settings");
         raw.make_raw();
         tcsetattr(&slave, OptionalActions::Now, &raw).expect("raw");

@@ -152,22 +152,17 @@ impl Plant {
         self.sql(sql).map_or(0, |text| text.trim().parse().unwrap_or_else(|_| panic!("`{sql}` gives {text}")))
     }
 
-    /// What the plain `sqlite3` reads from the record; `None` if there is none (yet).
+    /// What plain SQLite reads from the record: a line for each row, `|` between the columns; `None` if there is no record
+    /// (yet), or not all of it.
     ///
     /// # Panics
-    /// There is no `sqlite3`.
+    /// The record is no database.
     pub fn sql(&self, sql: &str) -> Option<String> {
         let record = self.folder().join("e14.db");
         if !record.exists() {
             return None;
         }
-        let output = Command::new("sqlite3")
-            .args(["-readonly", "-batch"])
-            .arg(record)
-            .arg(sql)
-            .output()
-            .expect("sqlite3 is installed");
-        output.status.success().then(|| String::from_utf8(output.stdout).expect("UTF-8"))
+        crate::sqlite::query(&record, sql).ok()
     }
 
     /// The open alarms, as the companion tells them.

@@ -1,5 +1,13 @@
 //! The main job, as the README's first command runs it.
 
+#![allow(
+    clippy::expect_used,
+    clippy::unwrap_used,
+    clippy::panic,
+    clippy::missing_panics_doc,
+    reason = "a test fails by a panic that tells what was expected"
+)]
+
 use std::process::Command;
 
 use hushwatch_tests::programs::{program, told};
@@ -18,9 +26,9 @@ fn the_demo_ends_in_the_right_alarm() {
     // opened on day 20 and dated to it.
     let record = folder.path().join("demo/cabinet.db");
     let sql = "SELECT DISTINCT subject FROM alarms WHERE kind = 'regression'";
-    let rows = Command::new("sqlite3").arg("-readonly").arg(record).arg(sql).output().expect("sqlite3 is installed");
-    assert_eq!(String::from_utf8_lossy(&rows.stdout).trim(), "W12", "{}", told(&output));
-    for file in ["site.toml", "scene.toml", "levels.csv"] {
+    let rows = hushwatch_tests::sqlite::query(&record, sql).expect("a record");
+    assert_eq!(rows.trim(), "W12", "{}", told(&output));
+    for file in ["site.toml", "scene.toml", "levels.csv", "W12.svg"] {
         assert!(folder.path().join("demo").join(file).exists(), "{file} is missing:\n{}", told(&output));
     }
 }

@@ -214,7 +214,7 @@ mod tests {
                 caption: "UTC".into(),
             },
             pieces: vec![piece(0..60, 40.0), piece(60..100, 46.0)],
-            lines: vec![Line { kind: LineKind::Before, db: 49.0 }, Line { kind: LineKind::After, db: 40.0 }],
+            lines: vec![Line { kind: LineKind::Before, db: 49.0 }, Line { kind: LineKind::After, db: 41.5 }],
             marks: vec![Mark { time: at(60), kind: MarkKind::Since, label: "too high since".into() }],
             gaps: Vec::new(),
         }
@@ -235,7 +235,7 @@ mod tests {
         };
         assert!(first(2, 40).expect("a low level") > first(46, 70).expect("a high level"), "{plain}");
         for word in
-            ["W12 ringing, running", "before the fix 49.0", "after the fix 40.0", "too high since", "day 1", "UTC"]
+            ["W12 ringing, running", "before the fix 49.0", "after the fix 41.5", "too high since", "day 1", "UTC"]
         {
             assert!(plain.contains(word), "{word}:\n{plain}");
         }

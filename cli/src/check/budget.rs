@@ -5,6 +5,7 @@ use std::fmt;
 use hushwatch_config::dialect::Coding;
 use hushwatch_config::site::{Cable, Parity, Site};
 use hushwatch_quantity::Span;
+use hushwatch_record::{LEVEL_BYTES, SWEEP_BYTES};
 use hushwatch_signal as signal;
 
 /// Cadence of a cable that does not say, s: as fast as the line allows, but not faster.
@@ -15,12 +16,6 @@ const ASCII_BYTES: f64 = 13.0;
 
 /// Bytes of questions and other answers of one segment: settings read back, error queue.
 const TALK_BYTES: usize = 600;
-
-/// Bytes of a level and its share of a sweep in the record, measured on records of one and three bands.
-const LEVEL_BYTES: f64 = 21.0;
-
-/// Bytes of a sweep beside its levels, with its place in the index.
-const SWEEP_BYTES: f64 = 38.0;
 
 /// Least that a commit writes to the disk, bytes: some pages of the log, and as many again when it is copied back.
 const COMMIT_BYTES: f64 = 5.0 * 4096.0 * 2.0;

@@ -261,7 +261,7 @@ proptest! {
     /// A service that is stopped at any level and started again finds the same as one that was not.
     #[test]
     fn a_restart_changes_nothing(seed in 1u64..1_000_000, stop in 1usize..1200, rise in 0.0f64..8.0) {
-        let all = levels(289..700, 0.8, seed, |block| if block >= 500 && block < 600 { 40.0 + rise } else { 40.0 });
+        let all = levels(289..700, 0.8, seed, |block| if (500..600).contains(&block) { 40.0 + rise } else { 40.0 });
         let mut whole = engine_with_reference(3.0);
         let expected = feed(&mut whole, &all);
 

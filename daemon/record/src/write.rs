@@ -66,6 +66,17 @@ impl Writer {
         Ok(())
     }
 
+    /// Commits, and brings everything from the log beside the file into the file itself, as far as no reader is in the
+    /// way: whoever copies the file alone after an orderly stop has it all.
+    ///
+    /// # Errors
+    /// The database cannot be written.
+    pub fn close(mut self) -> Result<(), RecordError> {
+        self.commit()?;
+        let wrong = open::database(&self.path);
+        self.db.query_row("PRAGMA wal_checkpoint(TRUNCATE)", [], |_| Ok(())).map_err(wrong)
+    }
+
     /// Keeps the site file, if it is another one than the latest. Its number is laid to all settings from now on.
     ///
     /// # Errors

@@ -257,3 +257,34 @@ fn each_version_of_the_site_file_is_kept_once() {
     let texts: Vec<_> = writer.read().site_versions().expect("versions").into_iter().map(|row| row.text).collect();
     assert_eq!(texts, ["format = 1", "format = 1\n# a word", "format = 1"]);
 }
+
+#[test]
+fn the_record_grows_as_it_is_told_to() {
+    for bands in [1, 3, 8] {
+        let (_folder, path) = folder();
+        let mut writer = writer(&path);
+        let cable = writer.cable("W12").expect("a cable");
+        let state = writer.state("running").expect("a state");
+        let setting = writer.setting("rx1", "{}").expect("settings");
+        let sweeps = 30_000;
+        let series: Vec<u32> = (0..bands)
+            .map(|band| writer.series(cable, &format!("band-{band}"), LevelUnit::DbMicroamp).expect("a series"))
+            .collect();
+        for n in 0..sweeps {
+            let level = |series: &u32| NewLevel {
+                series: *series,
+                level_db: 40.0 + f64::from(n % 97) / 50.0,
+                peak_db: 30.0,
+                peak_hz: 2e6 + 50e3 * f64::from(n % 160),
+                quality: Quality::GOOD,
+            };
+            let levels: Vec<NewLevel> = series.iter().map(level).collect();
+            let time = at(10 * i64::from(n));
+            writer.sweep(&NewSweep { time, cable, state, setting, levels: &levels }).expect("written");
+        }
+        writer.commit().expect("committed");
+        let got = writer.read().size().expect("a size") as f64 / f64::from(sweeps);
+        let told = hushwatch_record::SWEEP_BYTES + hushwatch_record::LEVEL_BYTES * f64::from(bands);
+        assert!((got / told - 1.0).abs() < 0.1, "{bands} bands: {got:.1} bytes a sweep, not {told:.1}");
+    }
+}

@@ -66,7 +66,11 @@ impl Keeper {
         let alarm = &action.alarm;
         let (occurrence, kind) = (alarm.occurrence, alarm.key.kind.label());
         let (subject, what) = (alarm.key.subject.as_str(), action.transition.label());
-        tracing::warn!(occurrence, kind, subject, what, "alarm: {}", action.text);
+        if action.notify == Notify::Yes {
+            tracing::warn!(occurrence, kind, subject, what, "alarm: {}", action.text);
+        } else {
+            tracing::info!(occurrence, kind, subject, what, "alarm: {}", action.text);
+        }
         self.writer.alarm(action)?;
         if action.notify == Notify::Yes {
             let body = notice::of(&self.site, action);
@@ -111,17 +115,17 @@ impl Keeper {
 
 fn detail(tag: &str, places: Vec<Place>) -> Detail {
     let since = places.iter().map(|place| place.since).min();
-    let text = match places.first() {
-        Some(Place { band, state, rise_db, .. }) => {
-            let others = match places.len() {
-                1 => String::new(),
-                2 => String::from(", and in one more place"),
-                more => format!(", and in {} more places", more - 1),
-            };
-            let since = since.map_or_else(String::new, |since| format!(" since {since}"));
-            format!("{tag} is {rise_db:.1} dB over its reference in {band} ({state}){others}{since}")
-        }
+    let place = |place: &Place| format!("{} ({})", place.band, place.state);
+    let mut text = match places.first() {
+        Some(first) => format!("{tag} is {:.1} dB over its reference in {}", first.rise_db, place(first)),
         None => format!("{tag} is over its reference"),
     };
+    if places.len() > 1 {
+        let others: Vec<String> = places.iter().skip(1).map(place).collect();
+        text.push_str(&format!(", also in {}", others.join(", ")));
+    }
+    if let Some(since) = since {
+        text.push_str(&format!("; since {since}"));
+    }
     Detail { text, since, places }
 }
