@@ -166,7 +166,7 @@ struct Level<'a> {
     band: &'a str,
     level: f64,
     peak: f64,
-    peak_hz: f64,
+    peak_hz: i64,
     state: &'a str,
     quality: String,
 }
@@ -186,7 +186,7 @@ fn levels<W: Write>(opened: &Opened, read: Read<'_>, filter: &Filter, sink: &mut
             band: &one.band,
             level: row.level_db,
             peak: row.peak_db,
-            peak_hz: row.peak_hz,
+            peak_hz: row.peak_hz as i64,
             state: states.get(&row.state).map_or("unknown", String::as_str),
             quality: row.quality.to_string(),
         };
