@@ -11,6 +11,7 @@ mod reference;
 mod simulate;
 mod standing;
 mod status;
+mod sweep;
 mod times;
 mod trend;
 mod written;
@@ -61,6 +62,8 @@ enum Command {
     Trend(trend::Arguments),
     /// Open alarms, and the operator's part of their life
     Alarms(alarms::Arguments),
+    /// One live sweep: spectrum, settings, levels; --transcript shows every byte
+    Sweep(sweep::Arguments),
     /// Mark an interval of the log as before or after the fix
     Reference(reference::Arguments),
     /// Levels, alarms or gaps for other programs
@@ -85,6 +88,7 @@ fn main() -> ExitCode {
         Command::Status(command) => status::run(&context, &command),
         Command::Trend(command) => trend::run(&context, &command),
         Command::Alarms(command) => alarms::run(&context, &command),
+        Command::Sweep(command) => sweep::run(&context, &command),
         Command::Reference(command) => reference::run(&context, &command),
         Command::Export(command) => export::run(&context, &command),
         Command::Demo(command) => demo::run(&command),

@@ -11,7 +11,6 @@ mod keeper;
 mod message;
 mod notice;
 mod outage;
-mod plan;
 mod schedule;
 mod serve;
 mod state;

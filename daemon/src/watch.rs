@@ -5,11 +5,11 @@ use std::time::Duration;
 
 use hushwatch_config::site::{Clock, Site};
 use hushwatch_instrument::{ErrorClass, Instrument, InstrumentError, SweepAnswer};
+use hushwatch_plan::CablePlan;
 use tokio::sync::{mpsc, watch as signal};
 
 use crate::clock;
 use crate::message::{Message, Swept, Trouble};
-use crate::plan::CablePlan;
 use crate::schedule::{Next, Schedule};
 use crate::state;
 

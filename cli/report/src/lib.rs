@@ -8,9 +8,11 @@
 
 mod picture;
 mod plot;
+mod spectrum;
 mod table;
 mod trend;
 
 pub use plot::Size;
+pub use spectrum::Spectrum;
 pub use table::{Cell, table};
 pub use trend::{Axis, Line, LineKind, Mark, MarkKind, Point, Tick, Trend};

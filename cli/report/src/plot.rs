@@ -20,7 +20,7 @@ pub struct Size {
 }
 
 /// Characters left of the plot: a level and the axis.
-const MARGIN: u16 = 8;
+pub(crate) const MARGIN: u16 = 8;
 /// Lines that are not plot, beside one for each mark: title, axis, labels, legend.
 const AROUND: u16 = 4;
 
@@ -40,23 +40,14 @@ impl Trend {
         let width = size.width.clamp(40, 400).saturating_sub(MARGIN);
         let around = AROUND + u16::try_from(self.marks.len()).unwrap_or(u16::MAX / 2);
         let height = size.height.clamp(12, 200).saturating_sub(around).max(6);
-        let area = Rect::new(0, 0, width, height);
-        let mut buffer = Buffer::empty(area);
         let (low, high) = self.range();
-        Canvas::default()
+        let canvas = Canvas::default()
             .marker(Marker::Braille)
             .x_bounds([0.0, 1.0])
             .y_bounds([low, high])
-            .paint(|context| self.draw(context))
-            .render(area, &mut buffer);
-
+            .paint(|context| self.draw(context));
         let mut text = format!("{}\n", self.title);
-        for row in 0..height {
-            let label = self.level_label(row, height, low, high);
-            text.push_str(&format!("{label:>6} \u{2502}"));
-            text.push_str(painted(&buffer, row, width).trim_end());
-            text.push('\n');
-        }
+        text.push_str(&rendered(canvas, (width, height), (low, high)));
         text.push_str(&self.time_axis(usize::from(width)));
         text.push_str(&self.legend());
         text
@@ -83,16 +74,6 @@ impl Trend {
         let levels: Vec<(f64, f64)> =
             self.pieces.iter().flatten().map(|point| (self.axis.share(point.time), point.db)).collect();
         context.draw(&Points { coords: &levels, color: Color::Reset });
-    }
-
-    /// The level at a row, on every fourth.
-    #[expect(clippy::unused_self, reason = "it belongs to the plot")]
-    fn level_label(&self, row: u16, height: u16, low: f64, high: f64) -> String {
-        if !(height - 1 - row).is_multiple_of(4) {
-            return String::new();
-        }
-        let share = (f64::from(height - 1 - row) + 0.5) / f64::from(height);
-        format!("{:.1}", low + share * (high - low))
     }
 
     /// The axis with its ticks, and the labels below them as far as there is room.
@@ -156,6 +137,30 @@ impl Trend {
         }
         text
     }
+}
+
+/// A canvas as rows of text, with levels written beside it.
+pub(crate) fn rendered(canvas: impl Widget, (width, height): (u16, u16), (low, high): (f64, f64)) -> String {
+    let area = Rect::new(0, 0, width, height);
+    let mut buffer = Buffer::empty(area);
+    canvas.render(area, &mut buffer);
+    let mut text = String::new();
+    for row in 0..height {
+        let label = level_label(row, height, low, high);
+        text.push_str(&format!("{label:>6} \u{2502}"));
+        text.push_str(painted(&buffer, row, width).trim_end());
+        text.push('\n');
+    }
+    text
+}
+
+/// The level at a row, on every fourth.
+fn level_label(row: u16, height: u16, low: f64, high: f64) -> String {
+    if !(height - 1 - row).is_multiple_of(4) {
+        return String::new();
+    }
+    let share = (f64::from(height - 1 - row) + 0.5) / f64::from(height);
+    format!("{:.1}", low + share * (high - low))
 }
 
 /// A row of the plot with its colours.

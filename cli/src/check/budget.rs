@@ -3,7 +3,7 @@
 use std::fmt;
 
 use hushwatch_config::dialect::Coding;
-use hushwatch_config::site::{Cable, Parity, Site};
+use hushwatch_config::site::{Parity, Site};
 use hushwatch_quantity::Span;
 use hushwatch_record::{LEVEL_BYTES, SWEEP_BYTES};
 use hushwatch_signal as signal;
@@ -35,7 +35,7 @@ impl Budget {
     pub(super) fn of(site: &Site, cable: usize) -> Self {
         let cable = &site.cables[cable];
         let instrument = &site.instruments[cable.instrument];
-        let bands = bands(site, cable);
+        let bands = hushwatch_plan::bands(cable, instrument);
         let most = usize::try_from(instrument.dialect.sweep.max_points).unwrap_or(usize::MAX);
         let segments = signal::plan_segments(&bands, most);
         let of_band = |index: usize| segments.iter().filter(|one| one.band == index).map(|one| one.points).sum();
@@ -74,20 +74,6 @@ impl fmt::Display for Budget {
         }
         write!(f, "; together {}, asked for every {}", span(self.whole_s()), span(self.every_s))
     }
-}
-
-/// The bands of a cable as the sums need them.
-pub(super) fn bands(site: &Site, cable: &Cable) -> Vec<signal::Band> {
-    let shape = site.instruments[cable.instrument].shape;
-    let band = |band: &hushwatch_config::site::Band| signal::Band {
-        from_hz: band.from_hz,
-        to_hz: band.to_hz,
-        rbw_hz: band.rbw_hz,
-        shape,
-        detector: band.detector,
-        exclude: band.exclude.clone(),
-    };
-    cable.bands.iter().map(band).collect()
 }
 
 /// The time in which an instrument comes round all its cables if it does nothing else, s.

@@ -6,7 +6,7 @@ use hushwatch_config::dialect::{Coding, Dialect};
 use hushwatch_config::site::{self, Clock, Flow, Parity};
 
 use crate::error::InstrumentError;
-use crate::link::{Line, Link, Probe};
+use crate::link::{Line, Link, Listener, Probe};
 use crate::machine::{Action, Machine, Rules};
 use crate::plan::{SweepAnswer, SweepPlan};
 
@@ -59,6 +59,11 @@ impl Instrument {
             let event = self.link.perform(&action).await;
             action = self.machine.step(event);
         }
+    }
+
+    /// Has every byte of the conversation told to a listener, both ways, as it goes over the line.
+    pub fn listen(&mut self, listener: Listener) {
+        self.link.listen(listener);
     }
 
     /// Who the instrument said it is, if the line is in step.

@@ -19,4 +19,5 @@ pub mod plan;
 
 pub use error::{ErrorClass, Garbage, InstrumentError};
 pub use instrument::Instrument;
+pub use link::{Listener, Way};
 pub use plan::{Reading, Segment, Settings, SweepAnswer, SweepPlan, Value};

@@ -94,7 +94,20 @@ pub struct Link {
     line: Line,
     port: Option<SerialStream>,
     buffer: Box<[u8]>,
+    listener: Option<Listener>,
 }
+
+/// Which way bytes went.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Way {
+    /// To the instrument.
+    Sent,
+    /// From the instrument, also what nobody asked for.
+    Received,
+}
+
+/// Is told every byte that goes over the line, as it goes.
+pub type Listener = Box<dyn FnMut(Way, &[u8]) + Send>;
 
 /// The port is not there any more.
 struct Lost(String);
@@ -108,12 +121,17 @@ impl From<std::io::Error> for Lost {
 impl Link {
     /// Nothing is opened yet.
     pub fn new(line: Line) -> Self {
-        Self { line, port: None, buffer: vec![0; PIECE].into_boxed_slice() }
+        Self { line, port: None, buffer: vec![0; PIECE].into_boxed_slice(), listener: None }
     }
 
     /// The path of the port.
     pub fn port(&self) -> &str {
         &self.line.port
+    }
+
+    /// Has every byte told to a listener from now on.
+    pub fn listen(&mut self, listener: Listener) {
+        self.listener = Some(listener);
     }
 
     /// Carries an action out; [`Action::Finish`] asks for nothing and is done at once.
@@ -188,10 +206,11 @@ impl Link {
 
     async fn tell(&mut self, bytes: &[u8]) -> Result<Event, Lost> {
         let port = self.port.as_mut().ok_or_else(closed)?;
-        if let Some(unasked) = waiting(port, &mut self.buffer)? {
+        if let Some(unasked) = waiting(port, &mut self.buffer, &mut self.listener)? {
             return Ok(Event::Garbled(Garbage::Unasked(unasked)));
         }
         trace!(port = self.line.port, "> {}", readable(bytes));
+        heard(&mut self.listener, Way::Sent, bytes);
         let limit = WRITE_LIMIT + self.line.time_of(bytes.len()) * 2;
         match timeout(limit, port.write_all(bytes)).await {
             Ok(written) => written.map(|()| Event::Done).map_err(Lost::from),
@@ -211,6 +230,7 @@ impl Link {
         loop {
             let Ok(read) = timeout_at(until, port.read(&mut self.buffer)).await else { return Ok(Event::TimedOut) };
             let piece = &self.buffer[..some(read?)?];
+            heard(&mut self.listener, Way::Received, piece);
             match decoder.push(piece) {
                 Ok(Some(answer)) => {
                     let (Answer::Line(text) | Answer::Block(text)) = &answer;
@@ -242,7 +262,9 @@ impl Link {
                 trace!(port = self.line.port, dropped, "quiet");
                 return Ok(Event::Quiet);
             };
-            dropped = dropped.saturating_add(some(read?)?);
+            let count = some(read?)?;
+            heard(&mut self.listener, Way::Received, &self.buffer[..count]);
+            dropped = dropped.saturating_add(count);
         }
     }
 }
@@ -271,16 +293,27 @@ fn closed() -> Lost {
     Lost("it is not open".to_owned())
 }
 
+fn heard(listener: &mut Option<Listener>, way: Way, bytes: &[u8]) {
+    if let Some(listener) = listener {
+        listener(way, bytes);
+    }
+}
+
 /// Reading nothing is a hang-up.
 fn some(count: usize) -> Result<usize, Lost> {
     if count == 0 { Err(Lost("it was hung up".to_owned())) } else { Ok(count) }
 }
 
 /// What has come that nobody asked for, beside the late end of a line.
-fn waiting(port: &mut SerialStream, buffer: &mut [u8]) -> Result<Option<String>, Lost> {
+fn waiting(
+    port: &mut SerialStream,
+    buffer: &mut [u8],
+    listener: &mut Option<Listener>,
+) -> Result<Option<String>, Lost> {
     match port.try_read(buffer) {
         Ok(count) => {
             let bytes = &buffer[..some(count)?];
+            heard(listener, Way::Received, bytes);
             let ends_only = bytes.iter().all(|byte| matches!(byte, b'\r' | b'\n'));
             Ok((!ends_only).then(|| readable(bytes)))
         }

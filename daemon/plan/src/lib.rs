@@ -1,9 +1,14 @@
-//! From the site file to what is swept and how it is read: the settings of the pure rooms, made once per cable.
+//! From the site file to what is swept, and from an answer to levels: the settings of the pure rooms, made once per cable.
+//!
+//! The service and the companion measure alike since both go through here.
+
+#![forbid(unsafe_code)]
 
 use hushwatch_config::site::{Cable, Floor, Instrument, ProbeKind, Site};
 use hushwatch_instrument::{Segment, SweepAnswer, SweepPlan};
 use hushwatch_quantity::{Quality, Reason, Span};
 use hushwatch_signal as signal;
+use hushwatch_signal::CurveError;
 
 /// How often a cable is looked at if the site file does not say.
 const EVERY: Span = Span::from_secs(10);
@@ -13,13 +18,13 @@ const VIDEO_RATIO: f64 = 3.0;
 
 /// Everything that is needed to look at one cable.
 #[derive(Clone, Debug)]
-pub(crate) struct CablePlan {
+pub struct CablePlan {
     /// The cable, by index in the site.
-    pub(crate) cable: usize,
+    pub cable: usize,
     /// How often it is looked at.
-    pub(crate) every: Span,
+    pub every: Span,
     /// What the instrument is told.
-    pub(crate) sweep: SweepPlan,
+    pub sweep: SweepPlan,
     bands: Vec<signal::Band>,
     /// Which band each segment belongs to.
     band_of: Vec<usize>,
@@ -32,7 +37,7 @@ impl CablePlan {
     ///
     /// # Errors
     /// The tables of its probe make no curve.
-    pub(crate) fn new(site: &Site, cable: usize, most_points: usize) -> anyhow::Result<Self> {
+    pub fn new(site: &Site, cable: usize, most_points: usize) -> Result<Self, CurveError> {
         let described = &site.cables[cable];
         let instrument = &site.instruments[described.instrument];
         let bands = bands(described, instrument);
@@ -54,7 +59,7 @@ impl CablePlan {
     }
 
     /// The level of each band from an answer; `None` where nothing of a band was measured.
-    pub(crate) fn levels(&self, answer: &SweepAnswer) -> Vec<Option<signal::BandLevel>> {
+    pub fn levels(&self, answer: &SweepAnswer) -> Vec<Option<signal::BandLevel>> {
         let mut given = Quality::GOOD;
         if !answer.settings.assumed().is_empty() {
             given.reason = Some(Reason::Assumed);
@@ -91,7 +96,8 @@ fn told(segment: &signal::Segment, band: &signal::Band, instrument: &Instrument)
     }
 }
 
-fn bands(cable: &Cable, instrument: &Instrument) -> Vec<signal::Band> {
+/// The bands of a cable as they are reduced to levels.
+pub fn bands(cable: &Cable, instrument: &Instrument) -> Vec<signal::Band> {
     let band = |band: &hushwatch_config::site::Band| signal::Band {
         from_hz: band.from_hz,
         to_hz: band.to_hz,
@@ -103,7 +109,7 @@ fn bands(cable: &Cable, instrument: &Instrument) -> Vec<signal::Band> {
     cable.bands.iter().map(band).collect()
 }
 
-fn chain(cable: &Cable) -> anyhow::Result<signal::CorrectionChain> {
+fn chain(cable: &Cable) -> Result<signal::CorrectionChain, CurveError> {
     let curve = |points: &[(f64, f64)]| {
         if points.is_empty() { Ok(signal::Curve::flat(0.0)) } else { signal::Curve::new(points.to_vec()) }
     };
