@@ -158,7 +158,11 @@ fn cable_row(picture: &Picture, cable: &CableStanding) -> Vec<Cell> {
     vec![
         Cell::new(&cable.tag),
         Cell::new(verdict).styled(style_of(place.verdict)),
-        Cell::new(if cable.has_choke { held(place) } else { String::from("no choke") }),
+        Cell::new(if cable.has_choke || place.standing.held.is_some() {
+            held(place)
+        } else {
+            String::from("no choke")
+        }),
         Cell::number(place.standing.drop.map_or_else(String::new, |drop| format!("{:+.1} dB", drop.db))),
         Cell::number(place.standing.now_db.map_or_else(String::new, |db| format!("{db:.1} {}", place.series.unit))),
         Cell::new(format!("{}, {}", place.series.band, place.state)),

@@ -140,13 +140,26 @@ fn transcript(log: &mpsc::Receiver<Told>) -> Result<(), Failure> {
             Way::Received => '<',
         };
         // What is sent is a line for each command; an answer is one thing, even if it is a block.
-        let lines: Vec<&[u8]> =
-            if way == Way::Sent { bytes.split_inclusive(|byte| *byte == b'\n').collect() } else { vec![&bytes] };
+        let lines = if way == Way::Sent { lines_of(&bytes) } else { vec![bytes.as_slice()] };
         for line in lines {
             writeln!(out, "{:9.3} {arrow} {}", at.as_secs_f64(), readable(line))?;
         }
     }
     Ok(())
+}
+
+/// Cuts behind each line end, be it CR, LF or both.
+fn lines_of(bytes: &[u8]) -> Vec<&[u8]> {
+    let mut lines = Vec::new();
+    let mut start = 0;
+    for (at, byte) in bytes.iter().enumerate() {
+        let ends = *byte == b'\n' || (*byte == b'\r' && bytes.get(at + 1) != Some(&b'\n'));
+        if ends || at + 1 == bytes.len() {
+            lines.push(&bytes[start..=at]);
+            start = at + 1;
+        }
+    }
+    lines
 }
 
 /// Printable characters as they are, all others escaped; of a long answer the beginning and the end.
@@ -305,6 +318,7 @@ mod tests {
         assert_eq!(readable(b"*IDN?\n"), "*IDN?\\n");
         assert_eq!(readable(b"0,\"No error\"\r\n"), "0,\"No error\"\\r\\n");
         assert_eq!(readable(&[b'#', 0, 0xff]), "#\\x00\\xff");
+        assert_eq!(lines_of(b"A\rB\r\nC\nD"), [&b"A\r"[..], b"B\r\n", b"C\n", b"D"]);
         let long = readable(&[b'a'; 500]);
         assert!(long.contains("428 bytes") && long.len() < 120, "{long}");
     }

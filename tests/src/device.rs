@@ -7,15 +7,13 @@
 use std::collections::{BTreeMap, VecDeque};
 use std::fs::File;
 use std::io::{Read, Write};
-use std::os::unix::fs::symlink;
 use std::path::{Path, PathBuf};
 use std::sync::{Arc, Mutex, MutexGuard};
 use std::thread::JoinHandle;
 
 use rustix::event::{PollFd, PollFlags, Timespec, poll};
-use rustix::fs::{Mode, OFlags};
-use rustix::pty::{OpenptFlags, grantpt, openpt, ptsname, unlockpt};
-use rustix::termios::{OptionalActions, tcgetattr, tcsetattr};
+
+use crate::terminal::Terminal;
 
 /// How the device behaves from the next command on.
 #[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
@@ -94,22 +92,11 @@ impl Device {
     /// There is no pseudo-terminal to be had.
     pub fn replug(&mut self) {
         self.turn().unplugged = false;
-        let master = openpt(OpenptFlags::RDWR | OpenptFlags::NOCTTY | OpenptFlags::CLOEXEC).expect("a pseudo-terminal");
-        grantpt(&master).expect("grantpt");
-        unlockpt(&master).expect("unlockpt");
-        let name = ptsname(&master, Vec::new()).expect("its name").into_string().expect("UTF-8");
-        // Kept open and raw: a terminal starts with echo, and hangs up whenever its last reader leaves.
-        let slave = rustix::fs::open(&name, OFlags::RDWR | OFlags::NOCTTY | OFlags::CLOEXEC, Mode::empty())
-            .expect("its other end");
-        let mut raw = tcgetattr(&slave).expect("its settings");
-        raw.make_raw();
-        tcsetattr(&slave, OptionalActions::Now, &raw).expect("raw");
-        let _ = std::fs::remove_file(&self.link);
-        symlink(&name, &self.link).expect("a link to the terminal");
+        let Terminal { master, slave } = Terminal::at(&self.link);
         let knobs = Arc::clone(&self.knobs);
         self.thread = Some(std::thread::spawn(move || {
             let _slave = slave;
-            Conversation::new(File::from(master), knobs).run();
+            Conversation::new(master, knobs).run();
         }));
     }
 }

@@ -13,3 +13,4 @@ pub mod device;
 pub mod plant;
 pub mod programs;
 pub mod sqlite;
+pub mod terminal;
