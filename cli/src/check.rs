@@ -14,12 +14,18 @@ use hushwatch_config::site::{
 use hushwatch_quantity::Span;
 use serde::Serialize;
 
-use crate::context::{Context, colored, print_json};
+use crate::context::{Context, colored, print_json, system_now};
 use crate::failure::Outcome;
 use budget::Budget;
 
 /// A check failed.
 const FAILED: u8 = 1;
+
+/// A period of 50 Hz; that of 60 Hz is shorter.
+const MAINS_PERIOD: Span = Span::from_millis(20);
+
+/// So many days before a calibration is due, it is told.
+const SOON_DAYS: i32 = 60;
 
 /// Reads the site file as the service would, tells what it means, and does the sums.
 #[derive(Args)]
@@ -94,6 +100,9 @@ fn in_words(site: &Site, budgets: &[Budget]) -> String {
         text.push_str(&in_words_cable(site, cable, budget));
     }
     text.push_str(&format!("\nRecord: {}\n", budget::record(site, budgets)));
+    for remark in remarks(site) {
+        text.push_str(&format!("Mind: {remark}\n"));
+    }
     text.push_str("Levels are for comparison with themselves; they are no compliance measurement.\n");
     text
 }
@@ -137,11 +146,50 @@ fn in_words_instrument(site: &Site, index: usize, instrument: &Instrument, budge
         text.push_str(&format!(
             "  IT DOES NOT KEEP UP: `every` asks for {asked:.1} times what the line can do; each cable comes every {round} instead\n"
         ));
-        text.push_str(
-            "  (fewer points by wider `rbw` or narrower bands, a shorter `dwell`, or a longer `every` help)\n",
-        );
+        text.push_str(&proposals(asked, busy));
     }
     text
+}
+
+/// What would make the line keep up: one of these, whichever costs least.
+fn proposals(asked: f64, busy: f64) -> String {
+    // A tenth to spare: retries and other people's clocks take some of it.
+    let every = Span::from_secs((1.1 * busy).ceil() as i64);
+    format!(
+        "    either  every = \"{every}\" on each of its cables\n    or      an `rbw` {:.1} times as wide (so many fewer \
+         points; levels of another bandwidth are another series)\n    or      bands that are narrower by as much\n",
+        1.1 * asked
+    )
+}
+
+/// What is hardly meant, or will soon be wrong, without being a fault.
+fn remarks(site: &Site) -> Vec<String> {
+    let mut remarks = Vec::new();
+    for instrument in site.instruments.iter().filter(|one| one.dwell < MAINS_PERIOD) {
+        remarks.push(format!(
+            "{}: a dwell of {} is shorter than a mains period (20 ms): the noise of drives comes in pulses, and a point may \
+             look away just then",
+            instrument.name, instrument.dwell
+        ));
+    }
+    let today = site.local(system_now()).date();
+    for cable in &site.cables {
+        if let Some(due) = cable.probe.due {
+            let days = today.until(due).map_or(0, |span| span.get_days());
+            if days < 0 {
+                remarks.push(format!("{}: the calibration of its probe was due on {due}", cable.tag));
+            } else if days <= SOON_DAYS {
+                remarks.push(format!("{}: the calibration of its probe is due in {days} days, on {due}", cable.tag));
+            }
+        }
+        if cable.max_rise_db.is_some_and(|rise| rise < 1.0) {
+            remarks.push(format!(
+                "{}: a `max_rise` under 1 dB is hardly more than the same clamp differs from day to day (common practice)",
+                cable.tag
+            ));
+        }
+    }
+    remarks
 }
 
 fn in_words_cable(site: &Site, cable: &Cable, budget: &Budget) -> String {
@@ -225,6 +273,7 @@ fn hertz(hz: f64) -> String {
 struct Written<'a> {
     ok: bool,
     site: &'a str,
+    remarks: Vec<String>,
     cables: Vec<WrittenCable<'a>>,
     bytes_a_day: f64,
     commits_a_day: f64,
@@ -256,6 +305,7 @@ fn written<'a>(site: &'a Site, budgets: &[Budget]) -> Written<'a> {
     Written {
         ok: true,
         site: &site.name,
+        remarks: remarks(site),
         cables: site.cables.iter().zip(budgets).map(cable).collect(),
         bytes_a_day: budget::bytes_a_day(site, budgets),
         commits_a_day: budget::commits_a_day(site),

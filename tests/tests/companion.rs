@@ -66,9 +66,30 @@ fn the_smallest_site_file_is_explained_with_its_sums() {
     let (code, page, _) = check(SITE);
     assert_eq!(code, 0, "{page}");
     // 150 kHz to 30 MHz at 9 kHz in steps of half of it: 6600 points and more, at 20 ms each more than two minutes.
-    for word in ["W12", "rms", "DOES NOT KEEP UP", "2 min", "a day", "no compliance measurement", "loop of 25 + 25 ohm"]
-    {
+    for word in [
+        "W12",
+        "rms",
+        "DOES NOT KEEP UP",
+        "every = \"2 min",
+        "rbw",
+        "2 min",
+        "a day",
+        "no compliance measurement",
+        "loop of 25 + 25 ohm",
+    ] {
         assert!(page.contains(word), "{word}:\n{page}");
+    }
+}
+
+#[test]
+fn what_is_hardly_meant_is_told() {
+    let text = SITE.replace("dialect = \"scpi-swept\"", "dialect = \"scpi-swept\"\ndwell = \"1 ms\"");
+    let text = text
+        .replace("kind = \"current-probe\",", "kind = \"current-probe\", calibrated = 2020-01-01, due = 2022-01-01,");
+    let (code, page, said) = check(&text);
+    assert_eq!(code, 0, "{page}{said}");
+    for word in ["shorter than a mains period", "was due on 2022-01-01"] {
+        assert!(page.contains(word), "{word}:\n{page}{said}");
     }
 }
 

@@ -88,6 +88,12 @@ impl Blocker {
         open.states.into_iter().filter_map(close).collect()
     }
 
+    /// Closes the open block before its end; what is left of its time is closed too, so that no two blocks begin alike.
+    pub(crate) fn close_early(&mut self) -> Vec<(StateId, Block)> {
+        let end = self.next_end();
+        end.map(|end| self.advance(end)).unwrap_or_default()
+    }
+
     /// Takes note that everything before `time` has been closed earlier.
     pub(crate) fn resume_after(&mut self, time: Time) {
         self.closed_until = self.closed_until.max(Some(time));

@@ -176,6 +176,20 @@ impl Engine {
         outcomes
     }
 
+    /// Levels of a series cannot be compared from now on with those before (another setting, another probe): its open block
+    /// is closed early, and its references and charts are set aside. A later `after` starts a new epoch. Readings that
+    /// still fall into the time of the block that was closed are left out.
+    pub fn set_aside(&mut self, series: SeriesId) -> Vec<Outcome> {
+        let Some(entry) = self.series.get_mut(&series) else { return Vec::new() };
+        let closed = entry.blocks.close_early();
+        let mut outcomes = Vec::new();
+        // The block still belongs to what was before.
+        self.close(series, closed, &mut outcomes);
+        let pairs = self.series.get_mut(&series).into_iter().flat_map(|entry| entry.states.values_mut());
+        outcomes.extend(pairs.filter_map(Pair::set_aside));
+        outcomes
+    }
+
     /// Takes a reading: closes the block of its series that ended before it, if any.
     pub fn observe(&mut self, reading: Reading) -> Vec<Outcome> {
         let Reading { series, state, time, level_db, quality } = reading;

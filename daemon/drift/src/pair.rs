@@ -22,6 +22,8 @@ pub(crate) struct Pair {
     before: Option<ReferenceFigure>,
     after: Option<ReferenceFigure>,
     chart: Option<Chart>,
+    /// The epoch of the last chart that was set aside.
+    past_epoch: u32,
     recent: VecDeque<Block>,
 }
 
@@ -81,8 +83,18 @@ impl Pair {
     ) -> Option<Outcome> {
         let max_rise_db = max_rise(settings, self.before.as_ref(), &figure);
         self.after = Some(figure);
-        let epoch = self.chart().map_or(0, |chart| chart.epoch) + 1;
+        let epoch = self.chart().map_or(self.past_epoch, |chart| chart.epoch) + 1;
         self.start(ChartState::new(epoch, from, figure.median_db, max_rise_db))
+    }
+
+    /// Forgets references, chart and recent blocks: what comes cannot be compared with them. Clears the finding that stood.
+    pub(crate) fn set_aside(&mut self) -> Option<Outcome> {
+        self.before = None;
+        self.after = None;
+        self.recent.clear();
+        let former = self.chart.take()?;
+        self.past_epoch = former.state.epoch;
+        former.state.active.map(|active| Outcome::Cleared(active.finding))
     }
 
     /// Starts a new epoch if the settings and references now ask for another `max_rise`.

@@ -158,6 +158,29 @@ fn a_new_reference_starts_a_new_epoch_and_ends_what_stood() {
 }
 
 #[test]
+fn what_cannot_be_compared_is_never_charted_together() {
+    let mut engine = engine_with_reference(3.0);
+    let outcomes = feed(&mut engine, &levels(289..400, 0.5, 24, |_| 46.0));
+    let epoch = raised(&outcomes).expect("a finding").epoch;
+    // Half of a block, then another attenuator.
+    let half = reading(at(400), 46.0);
+    engine.observe(half);
+    let outcomes = engine.set_aside(SERIES);
+    assert_eq!(blocks_of(&outcomes), [Block { start: at(400), median_db: 46.0, count: 1, worst: Quality::GOOD }]);
+    assert_eq!(cleared(&outcomes).expect("what stood is over").epoch, epoch);
+    assert!(engine.chart(SERIES, STATE).is_none());
+    assert_eq!(engine.recent(SERIES, STATE).count(), 0);
+    assert_eq!(engine.observe(reading(at(400) + Span::from_secs(300), 56.0)), [], "the block is closed");
+    let outcomes = feed(&mut engine, &levels(401..600, 0.5, 25, |_| 56.0));
+    assert_eq!(raised(&outcomes), None);
+    let blocks = blocks_of(&outcomes);
+    assert_eq!(blocks.first().map(|block| block.start), Some(at(401)));
+    let figure = reference_figure(&blocks, BLOCK).expect("a figure");
+    engine.set_reference(SERIES, STATE, ReferenceKind::After, figure, at(600));
+    assert!(engine.chart(SERIES, STATE).expect("a chart").epoch > epoch);
+}
+
+#[test]
 fn the_default_of_max_rise_is_half_of_what_was_achieved() {
     let mut engine = Engine::new(settings());
     engine.watch(SERIES, SeriesSettings::default());
