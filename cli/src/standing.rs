@@ -4,7 +4,7 @@ use hushwatch_alarm::{Alarm, AlarmKind, AlarmState, Place};
 use hushwatch_config::site::{Cable, Clock, Site};
 use hushwatch_drift::{ChartState, ReferenceFigure, ReferenceKind, Standing, Verdict, VerdictInput, standing, verdict};
 use hushwatch_quantity::{Quality, Span, Time};
-use hushwatch_record::{GapRow, LevelRow, Read, RecordError, ReferenceRow, SeriesRow};
+use hushwatch_record::{EpochRow, GapRow, LevelRow, Read, RecordError, ReferenceRow, SeriesRow};
 
 /// How many closed blocks make up "now": enough for a median that a burst does not move.
 const NOW_BLOCKS: usize = 12;
@@ -12,12 +12,17 @@ const NOW_BLOCKS: usize = 12;
 /// After so many turns without a level the last one is stale, and after a minute at least.
 const STALE_TURNS: i64 = 5;
 
+/// Why there is no verdict after the settings changed.
+const SET_ASIDE: &str = "the receiver's settings changed, so that the references no longer count: mark new ones";
+
 /// Everything that `status` tells.
 pub(crate) struct Picture {
     pub(crate) now: Time,
     pub(crate) cables: Vec<CableStanding>,
     pub(crate) alarms: Vec<Alarm>,
     pub(crate) gaps: Vec<GapRow>,
+    /// Cables whose references were set aside, since when and why.
+    pub(crate) set_aside: Vec<EpochRow>,
     pub(crate) size: u64,
 }
 
@@ -66,6 +71,7 @@ pub(crate) fn picture(site: &Site, read: Read<'_>, now: Time) -> Result<Picture,
         references: read.references()?,
         alarms: read.alarms(true)?,
         gaps: read.open_gaps()?,
+        epochs: read.epochs()?,
     };
     let mut cables = Vec::new();
     for cable in &site.cables {
@@ -73,7 +79,8 @@ pub(crate) fn picture(site: &Site, read: Read<'_>, now: Time) -> Result<Picture,
         let keeps_time = site.instrument(cable).is_some_and(|one| one.clock == Clock::Instrument);
         cables.push(looked.cable(cable, read, if keeps_time { None } else { Some(now) })?);
     }
-    Ok(Picture { now, cables, alarms: looked.alarms, gaps: looked.gaps, size: read.size()? })
+    let set_aside = looked.set_aside(&cables);
+    Ok(Picture { now, cables, alarms: looked.alarms, gaps: looked.gaps, set_aside, size: read.size()? })
 }
 
 /// What is read once for all cables.
@@ -83,6 +90,7 @@ struct Looked {
     references: Vec<ReferenceRow>,
     alarms: Vec<Alarm>,
     gaps: Vec<GapRow>,
+    epochs: Vec<EpochRow>,
 }
 
 impl Looked {
@@ -123,13 +131,19 @@ impl Looked {
         read: Read<'_>,
     ) -> Result<PlaceStanding, RecordError> {
         let name = self.states.iter().find(|(id, _)| *id == state).map_or_else(String::new, |(_, name)| name.clone());
+        // What was measured with other settings no longer counts.
+        let epoch = self.epochs.iter().rfind(|row| row.cable == cable.tag);
+        let comparable = |time: Time| epoch.is_none_or(|epoch| time >= epoch.time);
         let of = |kind| {
-            self.references.iter().filter(move |row| row.series == series.id && row.state == state && row.kind == kind)
+            self.references.iter().filter(move |row| {
+                row.series == series.id && row.state == state && row.kind == kind && comparable(row.interval.from)
+            })
         };
         let before = of(ReferenceKind::Before).next_back().cloned();
         let after = of(ReferenceKind::After).next_back().cloned();
         let commissioning = of(ReferenceKind::After).next();
-        let recent = read.recent_blocks(series.id, state, NOW_BLOCKS)?;
+        let mut recent = read.recent_blocks(series.id, state, NOW_BLOCKS)?;
+        recent.retain(|block| comparable(block.start));
         let figure = |row: &Option<ReferenceRow>| row.as_ref().map(|row| row.figure);
         let (before_figure, after_figure) = (figure(&before), figure(&after));
         let standing = standing(before_figure.as_ref(), after_figure.as_ref(), &recent);
@@ -147,13 +161,14 @@ impl Looked {
             held: standing.held,
             min_suppression_db: cable.min_suppression_db,
         });
+        let set_aside = epoch.is_some() && before.is_none() && after.is_none();
         let chart = read.chart(series.id, state)?;
         let series = series.clone();
         Ok(PlaceStanding {
             series,
             state: name,
             verdict,
-            why,
+            why: if set_aside { SET_ASIDE } else { why },
             standing,
             drop_since_commissioning_db,
             before,
@@ -161,6 +176,19 @@ impl Looked {
             chart,
             quality,
         })
+    }
+
+    /// The last epoch of each cable that had references before it and has none since.
+    fn set_aside(&self, cables: &[CableStanding]) -> Vec<EpochRow> {
+        let without = |cable: &&CableStanding| cable.places.iter().all(|place| place.after.is_none());
+        let tags = cables.iter().filter(without).map(|cable| cable.tag.as_str());
+        let had = |tag: &str| {
+            let of_cable = |id| self.series.iter().any(|series| series.id == id && series.cable == tag);
+            self.references.iter().any(|row| of_cable(row.series))
+        };
+        tags.filter(|tag| had(tag))
+            .filter_map(|tag| self.epochs.iter().rfind(|row| row.cable == tag).cloned())
+            .collect()
     }
 
     /// Is the last level of a cable too old to say anything about now?

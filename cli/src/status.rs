@@ -83,6 +83,15 @@ fn page(site: &Site, picture: &Picture, verbose: bool) -> String {
     let header = ["cable", "verdict", "suppression held", "drop", "level now", "where", "quality", "last"];
     let rows: Vec<Vec<Cell>> = picture.cables.iter().map(|cable| cable_row(picture, cable)).collect();
     text.push_str(&table(&header, &rows, width()));
+    for row in &picture.set_aside {
+        let warn = bold(AnsiColor::Yellow);
+        text.push_str(&format!(
+            "{warn}{}: its references no longer count since {}: {}; mark new ones{warn:#}\n",
+            row.cable,
+            local(site, row.time),
+            row.reason
+        ));
+    }
     if verbose {
         text.push('\n');
         text.push_str(&details(picture));

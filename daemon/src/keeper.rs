@@ -6,6 +6,7 @@
 
 mod alarms;
 mod ask;
+mod epochs;
 mod gaps;
 mod levels;
 mod references;
@@ -59,6 +60,10 @@ struct Cable {
     gap: Option<i64>,
     /// No level of it was recorded since the start.
     first: bool,
+    /// What bore on its last level.
+    bearing: Option<String>,
+    /// Levels before this cannot be compared with those after.
+    comparable_from: Option<Time>,
 }
 
 /// A band of a cable.

@@ -46,6 +46,8 @@ pub(crate) struct Swept {
     pub(crate) state: String,
     /// What the instrument was set to, as JSON.
     pub(crate) settings: String,
+    /// What bears on the levels, line by line.
+    pub(crate) bearing: Vec<String>,
     /// Settings that it cannot tell.
     pub(crate) assumed: Vec<&'static str>,
     /// Who it says it is.

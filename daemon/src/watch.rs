@@ -136,6 +136,7 @@ impl Task {
             time,
             state: state::at(&self.site, time),
             settings: settings(answer),
+            bearing: answer.settings.bearing(),
             assumed: answer.settings.assumed(),
             identity: answer.settings.identity.clone(),
             levels: plan.levels(answer),

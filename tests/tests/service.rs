@@ -206,6 +206,38 @@ fn killed_in_traffic_nothing_committed_is_lost_or_counted_twice() {
 }
 
 #[test]
+fn levels_of_other_settings_are_never_compared() {
+    let mut plant = Plant::new("");
+    with_references(&mut plant);
+    assert!(plant.stop().success(), "{}", plant.log());
+    // Another bandwidth, and a level that would be a regression by the old reference.
+    let site = std::fs::read_to_string(plant.site()).expect("a site file");
+    std::fs::write(plant.site(), site.replace("rbw = \"100 kHz\"", "rbw = \"200 kHz\"")).expect("a site file");
+    for input in [1, 2] {
+        plant.device.turn().dbm.insert(input, QUIET_DBM + 9.0);
+    }
+    plant.start();
+    let before = plant.count("SELECT count(*) FROM blocks");
+    plant.wait_for("ten seconds of blocks", |plant| plant.count("SELECT count(*) FROM blocks") >= before + 20);
+    assert_eq!(plant.alarms(), Vec::<Value>::new(), "{}", plant.log());
+    let epochs = plant.sql("SELECT cable, reason FROM epochs ORDER BY cable").expect("a record");
+    assert!(epochs.lines().count() == 2 && epochs.contains("rbw_hz is 200000, not 100000"), "{epochs}");
+    let page = plant.ask(&["status"], 0);
+    assert!(page.contains("W12: its references no longer count since"), "{page}");
+    // An interval that reaches back before the change makes no reference; one after it does.
+    let refused = plant.hushwatch(&["reference", "W12", "after", "--last", "1h"]);
+    assert!(hushwatch_tests::programs::told(&refused).contains("other settings"));
+    plant.ask(&["reference", "W12", "after", "--last", "8s", "--note", "wider filter"], 0);
+    // It is remembered over a restart.
+    plant.kill();
+    plant.start();
+    assert_eq!(plant.count("SELECT count(*) FROM epochs"), 2);
+    plant.device.turn().dbm.insert(1, QUIET_DBM + 15.0);
+    plant.wait_for("an alarm by the new reference", |plant| !plant.alarms().is_empty());
+    assert_eq!(kinds_and_cables(&plant.alarms()), [("regression".to_owned(), "W12".to_owned())]);
+}
+
+#[test]
 fn stopped_in_order_the_gap_is_told() {
     let mut plant = Plant::new("");
     plant.start();

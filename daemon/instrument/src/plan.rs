@@ -115,6 +115,19 @@ impl Settings {
         names
     }
 
+    /// What bears on a level, whether the device told it or it was taken as asked for: the identity, and each quantity of
+    /// each segment as `2 attenuation_db = 10` (segments from 1). Levels are comparable only where this is the same.
+    pub fn bearing(&self) -> Vec<String> {
+        let mut all = vec![format!("instrument = {}", self.identity)];
+        for (number, segment) in self.segments.iter().enumerate() {
+            all.extend(segment.iter().map(|(name, reading)| {
+                let (Reading::Told(value) | Reading::Assumed(value)) = reading;
+                format!("{} {name} = {value}", number + 1)
+            }));
+        }
+        all
+    }
+
     /// What is known of a quantity in one segment, if it was to be set.
     pub fn reading(&self, segment: usize, quantity: Quantity) -> Option<&Reading> {
         self.segments.get(segment)?.get(quantity.label())

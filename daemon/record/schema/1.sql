@@ -53,6 +53,11 @@ CREATE TABLE reference (
 ) STRICT;
 CREATE INDEX reference_of_series ON reference (series_id, state_id, kind);
 
+-- From here on the levels of a cable cannot be compared with those before, and why: another setting, another instrument.
+CREATE TABLE epoch (
+    id INTEGER PRIMARY KEY, cable_id INTEGER NOT NULL REFERENCES cable, time_us INTEGER NOT NULL, reason TEXT NOT NULL
+) STRICT;
+
 CREATE TABLE gap (
     id INTEGER PRIMARY KEY, cable_id INTEGER NOT NULL REFERENCES cable, from_us INTEGER NOT NULL, to_us INTEGER,
     reason TEXT NOT NULL
@@ -96,6 +101,10 @@ CREATE VIEW gaps AS
 SELECT strftime('%Y-%m-%dT%H:%M:%SZ', g.from_us / 1000000, 'unixepoch') AS "from",
        strftime('%Y-%m-%dT%H:%M:%SZ', g.to_us / 1000000, 'unixepoch') AS "to", c.tag AS cable, g.reason
 FROM gap g JOIN cable c ON c.id = g.cable_id;
+
+CREATE VIEW epochs AS
+SELECT strftime('%Y-%m-%dT%H:%M:%SZ', e.time_us / 1000000, 'unixepoch') AS time, c.tag AS cable, e.reason
+FROM epoch e JOIN cable c ON c.id = e.cable_id;
 
 CREATE VIEW alarms AS
 SELECT occurrence, kind, subject, state, strftime('%Y-%m-%dT%H:%M:%SZ', raised_us / 1000000, 'unixepoch') AS raised,

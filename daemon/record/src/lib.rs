@@ -5,7 +5,7 @@
 //! blocks are on the disk together or not at all (write-ahead log, `synchronous = FULL`).
 //!
 //! Tables are in the singular and made for the machine (numbers for names, microseconds, hundredths of a dB); views in
-//! the plural say the same to people: `levels`, `blocks`, `gaps`, `alarms`, `journal`, `reference_list`,
+//! the plural say the same to people: `levels`, `blocks`, `gaps`, `epochs`, `alarms`, `journal`, `reference_list`,
 //! `site_versions`. The schema stands in `schema/`, one file for each version.
 
 mod error;
@@ -17,8 +17,8 @@ mod write;
 pub use error::RecordError;
 pub use read::{Filter, Read, Reader};
 pub use rows::{
-    AlarmRow, GapRow, JournalRow, LevelRow, NewLevel, NewReference, NewSweep, OutboxRow, ReferenceRow, SeriesRow,
-    SiteVersionRow,
+    AlarmRow, EpochRow, GapRow, JournalRow, LevelRow, NewLevel, NewReference, NewSweep, OutboxRow, ReferenceRow,
+    SeriesRow, SiteVersionRow,
 };
 pub use write::Writer;
 

@@ -11,7 +11,9 @@ use rusqlite::{Connection, OptionalExtension, Params, Row};
 
 use crate::open;
 use crate::write::content;
-use crate::{CableId, GapRow, JournalRow, LevelRow, OutboxRow, RecordError, ReferenceRow, SeriesRow, SiteVersionRow};
+use crate::{
+    CableId, EpochRow, GapRow, JournalRow, LevelRow, OutboxRow, RecordError, ReferenceRow, SeriesRow, SiteVersionRow,
+};
 
 /// A connection that only reads.
 #[derive(Debug)]
@@ -222,6 +224,15 @@ impl<'a> Read<'a> {
                 })
             },
         )
+    }
+
+    /// From when on the levels of each cable are comparable, the earlier first: of a cable the last one counts.
+    ///
+    /// # Errors
+    /// The database cannot be read.
+    pub fn epochs(self) -> Result<Vec<EpochRow>, RecordError> {
+        let sql = "SELECT c.tag, e.time_us, e.reason FROM epoch e JOIN cable c ON c.id = e.cable_id ORDER BY e.id";
+        self.all(sql, [], |row| Ok(EpochRow { cable: row.get(0)?, time: time(row, 1)?, reason: row.get(2)? }))
     }
 
     /// The gaps that touch an interval, the earlier first.

@@ -112,6 +112,17 @@ pub struct ReferenceRow {
     pub figure: ReferenceFigure,
 }
 
+/// From when on the levels of a cable cannot be compared with those before, and why.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct EpochRow {
+    /// The tag of the cable.
+    pub cable: String,
+    /// From this level on, plant time.
+    pub time: Time,
+    /// Why.
+    pub reason: String,
+}
+
 /// An interval without levels, and why.
 #[derive(Clone, Debug, PartialEq, Eq)]
 pub struct GapRow {

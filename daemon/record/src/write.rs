@@ -254,6 +254,19 @@ impl Writer {
         )
     }
 
+    /// From `time` on the levels of a cable cannot be compared with those before. The states of its charts are forgotten;
+    /// references stay, but those of before no longer count.
+    ///
+    /// # Errors
+    /// The database cannot be written.
+    pub fn epoch(&mut self, cable: CableId, time: Time, reason: &str) -> Result<(), RecordError> {
+        self.insert(
+            "INSERT INTO epoch (cable_id, time_us, reason) VALUES (?1, ?2, ?3)",
+            params![cable, time.as_micros(), reason],
+        )?;
+        self.insert("DELETE FROM chart WHERE series_id IN (SELECT id FROM series WHERE cable_id = ?1)", params![cable])
+    }
+
     /// A cable has no levels from `from` on; the number of the gap.
     ///
     /// # Errors

@@ -248,6 +248,34 @@ fn blocks_charts_references_gaps_and_the_outbox() {
 }
 
 #[test]
+fn an_epoch_ends_the_charts_of_its_cable_alone() {
+    let (_folder, path) = folder();
+    let mut writer = writer(&path);
+    sweep(&mut writer, at(0), 40.0);
+    let other = writer.cable("W14").expect("a cable");
+    let series = writer.series(other, "ringing", LevelUnit::DbMicroamp).expect("a series");
+    let chart = |epoch| hushwatch_drift::ChartState {
+        epoch,
+        from: at(0),
+        target_db: 40.0,
+        max_rise_db: 3.0,
+        blocks: 0,
+        statistic: 0.5,
+        previous: None,
+        active: None,
+    };
+    writer.chart(1, 1, &chart(1)).expect("written");
+    writer.chart(series, 1, &chart(2)).expect("written");
+    writer.epoch(1, at(5), "attenuation_db: 20, not 10").expect("written");
+    writer.commit().expect("committed");
+    let reader = Reader::open(&path).expect("a reader");
+    assert_eq!(reader.read().chart(1, 1).expect("read"), None);
+    assert_eq!(reader.read().chart(series, 1).expect("read"), Some(chart(2)));
+    let epochs = reader.read().epochs().expect("read");
+    assert_eq!(epochs.iter().map(|row| (row.cable.as_str(), row.time)).collect::<Vec<_>>(), [("W12", at(5))]);
+}
+
+#[test]
 fn each_version_of_the_site_file_is_kept_once() {
     let (_folder, path) = folder();
     let mut writer = writer(&path);

@@ -11,6 +11,7 @@ impl Keeper {
         let instrument = self.site.cables[swept.cable].instrument;
         self.answered(instrument, swept)?;
         self.end_gap(swept.cable, swept.time)?;
+        self.compare_settings(swept)?;
         let state = self.writer.state(&swept.state)?;
         self.states.entry(state).or_insert_with(|| swept.state.clone());
         let levels: Vec<NewLevel> = self.cables[swept.cable]

@@ -75,6 +75,15 @@ impl Keeper {
                 Interval::new(latest - Span::from_micros(span), latest)
             }
         };
+        if let Some(since) = self.cables[cable].comparable_from
+            && interval.from < since
+        {
+            return Err(format!(
+                "until {since} {} was measured with other settings, so that levels from before cannot be compared with \
+                 those of now: begin the interval there, or later",
+                ask.cable
+            ));
+        }
         if interval.span() <= Span::ZERO {
             return Err(format!("the interval ends ({}) before it begins ({})", interval.to, interval.from));
         }

@@ -70,7 +70,10 @@ fn take_up(writer: &mut Writer, cable: &hushwatch_config::site::Cable) -> Result
         bands.push(Series { id: series, band: band.name.clone(), unit });
     }
     let latest = writer.read().latest_sweep(id)?;
-    Ok(Cable { id, bands, latest, gap: None, first: true })
+    let bearing = writer.read().remembered(&super::epochs::key(&cable.tag))?;
+    let epochs = writer.read().epochs()?;
+    let comparable_from = epochs.iter().rfind(|row| row.cable == cable.tag).map(|row| row.time);
+    Ok(Cable { id, bands, latest, gap: None, first: true, bearing, comparable_from })
 }
 
 /// The recipients with what still waits for them, and the other ends of their channels.
@@ -126,7 +129,10 @@ impl Keeper {
     fn lay_known_references(&mut self, watched: &[(usize, SeriesId)]) -> Result<(), RecordError> {
         let mut latest = BTreeMap::new();
         for row in self.writer.read().references()? {
-            if watched.iter().any(|(_, series)| *series == row.series) {
+            let watched = watched.iter().find(|(_, series)| *series == row.series);
+            let from = watched.map(|(cable, _)| self.cables[*cable].comparable_from);
+            // Those from before the last change of the settings stand in the record, but no longer count.
+            if from.is_some_and(|from| from.is_none_or(|from| row.interval.from >= from)) {
                 let order = matches!(row.kind, ReferenceKind::After);
                 latest.insert((row.series, row.state, order), row);
             }
