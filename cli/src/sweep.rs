@@ -12,7 +12,7 @@ use hushwatch_instrument::{Instrument, InstrumentError, Reading, SweepAnswer, Wa
 use hushwatch_plan::CablePlan;
 use hushwatch_quantity::LevelUnit;
 use hushwatch_report::{Cell, Size, Spectrum, table};
-use hushwatch_signal::BandLevel;
+use hushwatch_signal::{BandLevel, BandwidthLaw, Character};
 use serde::Serialize;
 
 use crate::context::{Context, height, print_json, width};
@@ -65,10 +65,11 @@ pub(crate) fn run(context: &Context, arguments: &Arguments) -> Outcome {
         return raw(&plan, &answer);
     }
     let levels = plan.levels(&answer);
+    let characters = plan.characters(&answer);
     if context.json {
-        print_json(&written(&site, cable, &answer, &levels))?;
+        print_json(&written(&site, cable, &answer, (&levels, &characters)))?;
     } else {
-        tell(&site, cable, &plan, &answer, &levels)?;
+        tell(&site, cable, &plan, &answer, (&levels, &characters))?;
     }
     let usable = levels.iter().flatten().any(|level| level.quality.is_usable());
     Ok(if usable { ExitCode::SUCCESS } else { ExitCode::from(COULD_NOT) })
@@ -206,7 +207,7 @@ fn tell(
     cable: usize,
     plan: &CablePlan,
     answer: &SweepAnswer,
-    levels: &[Option<BandLevel>],
+    (levels, characters): (&[Option<BandLevel>], &[Option<Character>]),
 ) -> Result<(), Failure> {
     let described = &site.cables[cable];
     let spectrum = Spectrum {
@@ -218,21 +219,39 @@ fn tell(
     let mut out = anstream::stdout().lock();
     out.write_all(spectrum.to_text(Size { width: width(), height: height().min(24) }).as_bytes())?;
     writeln!(out)?;
-    let row = |(band, level): (&hushwatch_config::site::Band, &Option<BandLevel>)| match level {
-        Some(level) => vec![
-            Cell::new(&band.name),
-            Cell::number(format!("{:.2} {}", level.level_db, unit(site, cable))),
-            Cell::number(format!("{:.2}", level.peak_db)),
-            Cell::number(format!("{:.3} MHz", level.peak_hz / 1e6)),
-            Cell::new(level.quality.to_string()),
-        ],
-        None => vec![Cell::new(&band.name), Cell::number("nothing was measured")],
-    };
-    let rows: Vec<Vec<Cell>> = described.bands.iter().zip(levels).map(row).collect();
-    out.write_all(table(&["band", "level", "peak", "at", "quality"], &rows, width()).as_bytes())?;
+    let row =
+        |((band, level), character): ((&hushwatch_config::site::Band, &Option<BandLevel>), &Option<Character>)| {
+            match level {
+                Some(level) => vec![
+                    Cell::new(&band.name),
+                    Cell::number(format!("{:.2} {}", level.level_db, unit(site, cable))),
+                    Cell::number(format!("{:.2}", level.peak_db)),
+                    Cell::number(format!("{:.3} MHz", level.peak_hz / 1e6)),
+                    Cell::new(character.as_ref().map_or_else(String::new, carried_by)),
+                    Cell::new(level.quality.to_string()),
+                ],
+                None => vec![Cell::new(&band.name), Cell::number("nothing was measured")],
+            }
+        };
+    let rows: Vec<Vec<Cell>> = described.bands.iter().zip(levels).zip(characters).map(row).collect();
+    out.write_all(table(&["band", "level", "peak", "at", "carried by", "quality"], &rows, width()).as_bytes())?;
     writeln!(out)?;
     out.write_all(settings(answer).as_bytes())?;
     Ok(())
+}
+
+/// What carries a band, in words.
+fn carried_by(character: &Character) -> String {
+    let lines = match character.lines {
+        1 => String::from("1 line"),
+        more => format!("{more} lines"),
+    };
+    match character.law() {
+        Some(BandwidthLaw::Tone) => lines,
+        Some(_) if character.lines == 0 => String::from("noise"),
+        Some(_) => format!("noise ({lines} in it)"),
+        None => format!("noise and {lines} ({:.0} % of the power)", 100.0 * character.line_share),
+    }
 }
 
 /// What the instrument was set to, and how that is known.
@@ -287,22 +306,36 @@ struct WrittenBand<'a> {
     level_db: Option<f64>,
     peak_db: Option<f64>,
     peak_hz: Option<f64>,
+    lines: Option<usize>,
+    line_share: Option<f64>,
+    crest_db: Option<f64>,
     quality: Option<String>,
 }
 
-fn written<'a>(site: &'a Site, cable: usize, answer: &'a SweepAnswer, levels: &[Option<BandLevel>]) -> Written<'a> {
+/// A band with what a sweep made of it.
+type OfBand<'a, 'b> = ((&'a hushwatch_config::site::Band, &'b Option<BandLevel>), &'b Option<Character>);
+
+fn written<'a>(
+    site: &'a Site,
+    cable: usize,
+    answer: &'a SweepAnswer,
+    (levels, characters): (&[Option<BandLevel>], &[Option<Character>]),
+) -> Written<'a> {
     let described = &site.cables[cable];
-    let band = |(band, level): (&'a hushwatch_config::site::Band, &Option<BandLevel>)| WrittenBand {
+    let band = |((band, level), character): OfBand<'a, '_>| WrittenBand {
         band: &band.name,
         level_db: level.as_ref().map(|level| hundredths(level.level_db)),
         peak_db: level.as_ref().map(|level| hundredths(level.peak_db)),
         peak_hz: level.as_ref().map(|level| level.peak_hz.round()),
+        lines: character.as_ref().map(|character| character.lines),
+        line_share: character.as_ref().map(|character| hundredths(character.line_share)),
+        crest_db: character.as_ref().map(|character| hundredths(character.crest_db)),
         quality: level.as_ref().map(|level| level.quality.to_string()),
     };
     Written {
         cable: &described.tag,
         unit: unit(site, cable),
-        bands: described.bands.iter().zip(levels).map(band).collect(),
+        bands: described.bands.iter().zip(levels).zip(characters).map(band).collect(),
         settings: &answer.settings,
         trace_unit: answer.unit.label(),
         trace: &answer.segments,

@@ -68,18 +68,29 @@ impl CablePlan {
             given = given.worse(Quality::bad(Reason::Overload));
         }
         let of_band = |index: usize| {
-            let traces: Vec<signal::Trace<'_>> = (0..self.band_of.len())
-                .filter(|segment| self.band_of[*segment] == index)
-                .map(|segment| signal::Trace {
-                    start_hz: self.sweep.segments[segment].start_hz,
-                    stop_hz: self.sweep.segments[segment].stop_hz,
-                    unit: answer.unit,
-                    values: &answer.segments[segment],
-                })
-                .collect();
-            signal::band_level(&traces, &self.chain, &self.bands[index], &self.receiver, given)
+            signal::band_level(&self.traces(index, answer), &self.chain, &self.bands[index], &self.receiver, given)
         };
         (0..self.bands.len()).map(of_band).collect()
+    }
+}
+
+impl CablePlan {
+    /// What carries each band: lines or noise; `None` where nothing of a band was measured.
+    pub fn characters(&self, answer: &SweepAnswer) -> Vec<Option<signal::Character>> {
+        let of_band = |index: usize| signal::character(&self.traces(index, answer), &self.chain, &self.bands[index]);
+        (0..self.bands.len()).map(of_band).collect()
+    }
+
+    /// The traces that belong to a band.
+    fn traces<'a>(&self, band: usize, answer: &'a SweepAnswer) -> Vec<signal::Trace<'a>> {
+        (0..self.band_of.len())
+            .filter(|segment| self.band_of[*segment] == band)
+            .filter_map(|segment| {
+                let swept = &self.sweep.segments[segment];
+                let values = answer.segments.get(segment)?;
+                Some(signal::Trace { start_hz: swept.start_hz, stop_hz: swept.stop_hz, unit: answer.unit, values })
+            })
+            .collect()
     }
 }
 

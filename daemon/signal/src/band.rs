@@ -120,7 +120,7 @@ impl Cell {
         self.reading.abs() <= MOST_DB
     }
 
-    fn counts(&self) -> bool {
+    pub(crate) fn counts(&self) -> bool {
         self.width_hz > 0.0 && self.is_measured()
     }
 }

@@ -40,6 +40,7 @@ mod band;
 mod bandwidth;
 mod cells;
 mod chain;
+mod character;
 mod curve;
 mod receiver;
 mod segments;
@@ -53,6 +54,7 @@ pub use averages::{mean_of_db, mean_of_noise_db_bias, mean_power_db, noise_db_sp
 pub use band::{Band, BandLevel, Trace, band_level};
 pub use bandwidth::{BandwidthLaw, rescale_bandwidth};
 pub use chain::{CorrectionChain, ProbeKind};
+pub use character::{Character, LINE_DB, character};
 pub use curve::{Curve, CurveError};
 pub use receiver::{Floor, Receiver, subtract_floor};
 pub use segments::{Segment, plan_segments, scan_time_s, transfer_time_s};
