@@ -29,6 +29,12 @@ impl Failure {
         Self { text: text.into(), code: COULD_NOT }
     }
 
+    /// What is told.
+    #[cfg(test)]
+    pub(crate) fn text(self) -> String {
+        self.text
+    }
+
     /// Tells it and gives the exit code. A reader that has seen enough (`| head`) is no failure at all.
     pub(crate) fn told(self) -> ExitCode {
         if !self.text.is_empty() {

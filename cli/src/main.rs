@@ -7,7 +7,9 @@ mod context;
 mod demo;
 mod export;
 mod failure;
+mod levels_csv;
 mod reference;
+mod replay;
 mod simulate;
 mod standing;
 mod status;
@@ -68,6 +70,8 @@ enum Command {
     Reference(reference::Arguments),
     /// Levels, alarms or gaps for other programs
     Export(export::Arguments),
+    /// What would these settings have alarmed on? Levels from a file through the charts
+    Replay(replay::Arguments),
     /// A simulated cabinet from start to finish, in about a minute
     Demo(demo::Arguments),
     /// Only the simulated receiver, on a pseudo-terminal
@@ -91,6 +95,7 @@ fn main() -> ExitCode {
         Command::Sweep(command) => sweep::run(&context, &command),
         Command::Reference(command) => reference::run(&context, &command),
         Command::Export(command) => export::run(&context, &command),
+        Command::Replay(command) => replay::run(&context, &command),
         Command::Demo(command) => demo::run(&command),
         Command::Simulate(command) => simulate::run(&command),
     };
