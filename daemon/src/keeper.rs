@@ -14,6 +14,7 @@ mod start;
 
 use std::collections::{BTreeMap, VecDeque};
 use std::sync::Arc;
+use std::time::Duration;
 
 use hushwatch_alarm::Board;
 use hushwatch_config::site::{Clock, Site};
@@ -27,6 +28,13 @@ use crate::clock;
 use crate::deliver::Delivery;
 use crate::message::Message;
 use crate::outage::Outage;
+use crate::pulse::Pulse;
+
+/// How often the keeper is heard of when there is nothing to do.
+const BREATH: Duration = Duration::from_secs(20);
+
+/// How long it may take over one message or one commit: a worn flash disk can be slow.
+const PROMISE: Duration = Duration::from_mins(2);
 
 /// Everything that only one may change.
 #[derive(Debug)]
@@ -47,6 +55,8 @@ pub(crate) struct Keeper {
     due: Option<Instant>,
     /// To be committed before the next message.
     urgent: bool,
+    /// Where it promises to be heard of again, and as which part.
+    pulse: Option<(Arc<Pulse>, usize)>,
 }
 
 /// What the keeper knows of a cable.
@@ -104,6 +114,11 @@ impl Keeper {
         start::open(site, now)
     }
 
+    /// Has it promise to be heard of, as this part.
+    pub(crate) fn with_pulse(self, pulse: Arc<Pulse>, part: usize) -> Self {
+        Self { pulse: Some((pulse, part)), ..self }
+    }
+
     /// Takes messages until told to stop, or until nobody is left to send any.
     ///
     /// # Errors
@@ -114,15 +129,18 @@ impl Keeper {
             self.send_notices();
             self.commit_if_due()?;
             loop {
-                let message = match self.due {
-                    None => rx.recv().await,
-                    Some(due) => tokio::select! {
-                        message = rx.recv() => message,
-                        () = tokio::time::sleep_until(due) => {
+                if let Some((pulse, part)) = &self.pulse {
+                    pulse.promise(*part, PROMISE);
+                }
+                let wake = Instant::now() + BREATH;
+                let message = tokio::select! {
+                    message = rx.recv() => message,
+                    () = tokio::time::sleep_until(self.due.unwrap_or(wake).min(wake)) => {
+                        if self.due.is_some_and(|due| due <= Instant::now()) {
                             self.commit()?;
-                            continue;
                         }
-                    },
+                        continue;
+                    }
                 };
                 match message {
                     None | Some(Message::Stop) => break,

@@ -11,6 +11,7 @@ mod keeper;
 mod message;
 mod notice;
 mod outage;
+mod pulse;
 mod schedule;
 mod serve;
 mod state;
@@ -30,6 +31,7 @@ use tokio::task::JoinSet;
 
 use keeper::Keeper;
 use message::Message;
+use pulse::Pulse;
 
 /// How many messages may wait for the keeper: enough for a slow disk, few enough to notice that it does not follow.
 const WAITING: usize = 256;
@@ -64,6 +66,8 @@ pub async fn run(site: Site, shutdown: impl Future<Output = &'static str>) -> an
     let instruments = open_instruments(&site)?;
     let listener = control::listen(&site.control_socket).context("the control socket")?;
 
+    let pulse = Arc::new(Pulse::new(site.instruments.len() + 1));
+    let keeper = keeper.with_pulse(Arc::clone(&pulse), site.instruments.len());
     let (stop_tx, stop) = signal::channel(false);
     let (ended_tx, mut ended) = oneshot::channel();
     let keeper = std::thread::Builder::new().name("keeper".into()).spawn(move || {
@@ -73,14 +77,20 @@ pub async fn run(site: Site, shutdown: impl Future<Output = &'static str>) -> an
 
     let mut tasks = JoinSet::new();
     for (index, instrument) in instruments.into_iter().enumerate() {
-        tasks.spawn(watch::instrument(Arc::clone(&site), index, instrument, tx.clone(), stop.clone()));
+        let task = watch::Task::new(Arc::clone(&site), index, instrument, Arc::clone(&pulse));
+        tasks.spawn(watch::instrument(task, tx.clone(), stop.clone()));
     }
     tasks.spawn(serve::control(listener, tx.clone(), stop.clone()));
     for outlet in outlets {
         tasks.spawn(deliver::recipient(outlet, tx.clone(), stop.clone()));
     }
+    let mut parts: Vec<String> = site.instruments.iter().map(|one| format!("the task of {}", one.name)).collect();
+    parts.push(String::from("the keeper of the record"));
+    let fed = stop.clone();
+    tasks.spawn(async move { pulse::feed(&pulse, &parts, fed).await });
     let (cables, record) = (site.cables.len(), site.record.path.display());
     tracing::info!(site = site.name, cables, %record, "watching");
+    pulse::say(&[sd_notify::NotifyState::Ready, sd_notify::NotifyState::Status(&format!("watching {cables} cables"))]);
 
     let outcome = tokio::select! {
         why = shutdown => {
@@ -89,6 +99,7 @@ pub async fn run(site: Site, shutdown: impl Future<Output = &'static str>) -> an
         }
         outcome = &mut ended => Some(outcome),
     };
+    pulse::say(&[sd_notify::NotifyState::Stopping]);
     // Nobody may listen any more: then all have ended already.
     let _ = stop_tx.send(true);
     let all = async { while tasks.join_next().await.is_some() {} };

@@ -10,6 +10,7 @@ use tokio::sync::{mpsc, watch as signal};
 
 use crate::clock;
 use crate::message::{Message, Swept, Trouble};
+use crate::pulse::Pulse;
 use crate::schedule::{Next, Schedule};
 use crate::state;
 
@@ -17,15 +18,11 @@ use crate::state;
 /// opened again by a back-off of its own: this one holds for refusals that come at once.
 const PAUSES: (Duration, Duration) = (Duration::from_millis(100), Duration::from_secs(5));
 
+/// On top of every time that is promised to the watchdog: a busy computer is no reason for a new start.
+const SLACK: Duration = Duration::from_secs(30);
+
 /// Watches the cables of one instrument until told to stop, or until the keeper is gone.
-pub(crate) async fn instrument(
-    site: Arc<Site>,
-    index: usize,
-    instrument: Instrument,
-    tx: mpsc::Sender<Message>,
-    mut stop: signal::Receiver<bool>,
-) {
-    let mut task = Task::new(site, index, instrument);
+pub(crate) async fn instrument(mut task: Task, tx: mpsc::Sender<Message>, mut stop: signal::Receiver<bool>) {
     loop {
         let told = tokio::select! {
             _ = stop.wait_for(|stop| *stop) => return,
@@ -39,7 +36,8 @@ pub(crate) async fn instrument(
     }
 }
 
-struct Task {
+/// What the task of an instrument has.
+pub(crate) struct Task {
     site: Arc<Site>,
     index: usize,
     instrument: Instrument,
@@ -49,10 +47,12 @@ struct Task {
     /// The class of the trouble that was logged last, as long as it lasts.
     trouble: Option<ErrorClass>,
     pause: Duration,
+    pulse: Arc<Pulse>,
 }
 
 impl Task {
-    fn new(site: Arc<Site>, index: usize, instrument: Instrument) -> Self {
+    /// An instrument with all that is to be swept on it.
+    pub(crate) fn new(site: Arc<Site>, index: usize, instrument: Instrument, pulse: Arc<Pulse>) -> Self {
         let cables: Vec<usize> =
             (0..site.cables.len()).filter(|cable| site.cables[*cable].instrument == index).collect();
         let free_running = site.instruments[index].clock == Clock::Instrument;
@@ -65,6 +65,7 @@ impl Task {
             schedule: Schedule::new([], clock::now(), free_running),
             trouble: None,
             pause: PAUSES.0,
+            pulse,
         };
         task.plan();
         let every = task.plans.iter().map(|plan| plan.every);
@@ -94,9 +95,15 @@ impl Task {
     /// Waits for the next cable's turn and sweeps it. To be dropped at any time.
     async fn turn(&mut self) -> Option<Message> {
         let at = match self.schedule.next(clock::now()) {
-            None => return std::future::pending().await,
+            None => {
+                // There is nothing to do, ever.
+                self.pulse.promise(self.index, Duration::MAX);
+                return std::future::pending().await;
+            }
             Some(Next::Wait(until)) => {
-                tokio::time::sleep((until - clock::now()).to_duration()).await;
+                let wait = (until - clock::now()).to_duration();
+                self.pulse.promise(self.index, wait.saturating_add(SLACK));
+                tokio::time::sleep(wait).await;
                 return None;
             }
             Some(Next::Sweep(at)) => at,
@@ -104,6 +111,7 @@ impl Task {
         let started = clock::now();
         // The turn is taken also if this future is dropped half-way.
         self.schedule.done(at, started);
+        self.pulse.promise(self.index, self.patience(at));
         let outcome = self.instrument.sweep(&self.plans[at].sweep).await;
         match outcome {
             Ok(answer) => self.swept(at, &answer).await,
@@ -115,6 +123,14 @@ impl Task {
             }
             Err(error) => Some(self.failed(error.class(), error.to_string()).await),
         }
+    }
+
+    /// How long a sweep may take with everything that may go wrong on the way: the sweep itself twice (it may have to be
+    /// begun again), the longest pause before a port is opened, and some time-outs.
+    fn patience(&self, at: usize) -> Duration {
+        let scan: f64 = self.plans[at].sweep.segments.iter().map(hushwatch_instrument::Segment::sweep_s).sum();
+        let timeout = self.site.instruments[self.index].timeout.to_duration();
+        Duration::from_secs_f64(2.0 * scan) + timeout.saturating_mul(10) + SLACK
     }
 
     async fn swept(&mut self, at: usize, answer: &SweepAnswer) -> Option<Message> {
@@ -158,6 +174,7 @@ impl Task {
             tracing::warn!(instrument, "{}: {text}; trying on", class.label());
             self.trouble = Some(class);
         }
+        self.pulse.promise(self.index, self.pause + SLACK);
         tokio::time::sleep(self.pause).await;
         self.pause = self.pause.saturating_mul(2).min(PAUSES.1);
         Message::Trouble(Trouble { instrument: self.index, class, text })

@@ -75,10 +75,19 @@ impl Plant {
     /// # Panics
     /// It does not start.
     pub fn start_only(&mut self) {
+        self.start_with(&[]);
+    }
+
+    /// Starts the service with more in its environment.
+    ///
+    /// # Panics
+    /// It does not start.
+    pub fn start_with(&mut self, environment: &[(&str, &str)]) {
         let log = std::fs::OpenOptions::new().create(true).append(true).open(self.folder().join("service.log"));
         let child = Command::new(program("hushwatchd"))
             .arg("--site")
             .arg(self.site())
+            .envs(environment.iter().copied())
             .stdin(Stdio::null())
             .stderr(log.expect("a log"))
             .spawn()

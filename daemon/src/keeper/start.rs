@@ -49,6 +49,7 @@ pub(super) fn open(site: Arc<Site>, now: Time) -> Result<(Keeper, Vec<Delivery>)
         started: Instant::now(),
         due: None,
         urgent: true,
+        pulse: None,
     };
     keeper.resume_charts()?;
     keeper.resume_gaps()?;
