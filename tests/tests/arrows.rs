@@ -1,14 +1,6 @@
 //! The arrows between the rooms point one way: what cargo says of the workspace is held against the table of the
 //! design, and pure rooms reach nothing that could read a clock, a file or a socket.
 
-#![allow(
-    clippy::expect_used,
-    clippy::unwrap_used,
-    clippy::panic,
-    clippy::missing_panics_doc,
-    reason = "a test fails by a panic that tells what was expected"
-)]
-
 use std::collections::{BTreeMap, BTreeSet};
 use std::process::Command;
 

@@ -1,13 +1,5 @@
 //! The companion's surface: what it says of site files, its exit codes, and how it behaves in a pipe.
 
-#![allow(
-    clippy::expect_used,
-    clippy::unwrap_used,
-    clippy::panic,
-    clippy::missing_panics_doc,
-    reason = "a test fails by a panic that tells what was expected"
-)]
-
 use std::io::{BufRead, BufReader, Read};
 use std::path::Path;
 use std::process::{Command, Output, Stdio};

@@ -1,13 +1,5 @@
 //! The main job, as the README's first command runs it.
 
-#![allow(
-    clippy::expect_used,
-    clippy::unwrap_used,
-    clippy::panic,
-    clippy::missing_panics_doc,
-    reason = "a test fails by a panic that tells what was expected"
-)]
-
 use std::process::Command;
 
 use hushwatch_tests::programs::{program, told};

@@ -1,13 +1,5 @@
 //! A receiver of a command set that nothing here knows, and the dialect file that config/dialects/README.md writes for it.
 
-#![allow(
-    clippy::expect_used,
-    clippy::unwrap_used,
-    clippy::panic,
-    clippy::missing_panics_doc,
-    reason = "a test fails by a panic that tells what was expected"
-)]
-
 use std::io::{Read, Write};
 use std::path::Path;
 use std::process::Command;

@@ -1,13 +1,5 @@
 //! Several inputs and several instruments: all come in their turn, and one's trouble is nobody else's.
 
-#![allow(
-    clippy::expect_used,
-    clippy::unwrap_used,
-    clippy::panic,
-    clippy::missing_panics_doc,
-    reason = "a test fails by a panic that tells what was expected"
-)]
-
 use std::path::Path;
 use std::process::{Child, Command, Stdio};
 use std::time::{Duration, Instant};

@@ -1,14 +1,6 @@
 //! The service and its companion, as real programs, with an instrument on a pseudo-terminal that is not the
 //! project's own simulator.
 
-#![allow(
-    clippy::expect_used,
-    clippy::unwrap_used,
-    clippy::panic,
-    clippy::missing_panics_doc,
-    reason = "a test fails by a panic that tells what was expected"
-)]
-
 use std::time::Duration;
 
 use hushwatch_tests::device::{Knobs, Manner};

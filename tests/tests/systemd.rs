@@ -1,13 +1,5 @@
 //! What the service manager is told: readiness, that all is alive, the stop.
 
-#![allow(
-    clippy::expect_used,
-    clippy::unwrap_used,
-    clippy::panic,
-    clippy::missing_panics_doc,
-    reason = "a test fails by a panic that tells what was expected"
-)]
-
 use std::os::unix::net::UnixDatagram;
 use std::time::Duration;
 
