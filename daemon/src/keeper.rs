@@ -55,6 +55,8 @@ pub(crate) struct Keeper {
     due: Option<Instant>,
     /// To be committed before the next message.
     urgent: bool,
+    /// The faults of a site file that was saved and refused.
+    refused_site: Option<String>,
     /// Where it promises to be heard of again, and as which part.
     pulse: Option<(Arc<Pulse>, usize)>,
 }
@@ -143,11 +145,11 @@ impl Keeper {
                     }
                 };
                 match message {
-                    None | Some(Message::Stop) => break,
+                    None => return self.stop(false),
+                    Some(Message::Stop { again }) => return self.stop(again),
                     Some(message) => self.take(message)?,
                 }
             }
-            self.stop()
         })?;
         Ok(())
     }
@@ -164,7 +166,8 @@ impl Keeper {
                 let _ = reply.send(answer);
             }
             Message::Told { recipient, id, error } => self.told(recipient, id, error)?,
-            Message::Stop => {}
+            Message::SiteFile { refused } => self.refused_site = refused,
+            Message::Stop { .. } => {}
         }
         self.commit_if_due()?;
         self.send_notices();
@@ -188,8 +191,9 @@ impl Keeper {
         self.writer.commit()
     }
 
-    fn stop(mut self) -> Result<(), RecordError> {
-        self.writer.remember(start::STOPPED, Some(&clock::now().to_string()))?;
+    fn stop(mut self, again: bool) -> Result<(), RecordError> {
+        let when = clock::now().to_string();
+        self.writer.remember(start::STOPPED, Some(if again { start::AGAIN } else { &when }))?;
         self.writer.close()?;
         tracing::info!("everything is recorded");
         Ok(())

@@ -12,6 +12,7 @@ mod message;
 mod notice;
 mod outage;
 mod pulse;
+mod reload;
 mod schedule;
 mod serve;
 mod state;
@@ -29,9 +30,11 @@ use hushwatch_instrument::{Instrument, InstrumentError};
 use tokio::sync::{mpsc, oneshot, watch as signal};
 use tokio::task::JoinSet;
 
+use hushwatch_record::Writer;
 use keeper::Keeper;
 use message::Message;
 use pulse::Pulse;
+use reload::{Change, SiteFile};
 
 /// How many messages may wait for the keeper: enough for a slow disk, few enough to notice that it does not follow.
 const WAITING: usize = 256;
@@ -57,13 +60,52 @@ pub fn load_site(path: &Path) -> anyhow::Result<Site> {
 /// Watches the site until `shutdown` tells why to stop. Then, in this order: no sweep is begun any more, the control
 /// socket is closed, deliveries are broken off (the record keeps what was not told), and the keeper commits.
 ///
+/// When the site file is saved with another content, everything is stopped in that order and begun anew by the new file,
+/// which takes some hundredths of a second; what stands in the record goes on. A file with faults is refused, and the
+/// one in force stays.
+///
 /// # Errors
 /// The record, the control socket or a port belongs to another process, or the record can no longer be written.
 pub async fn run(site: Site, shutdown: impl Future<Output = &'static str>) -> anyhow::Result<()> {
-    let site = Arc::new(site);
+    let mut shutdown = std::pin::pin!(shutdown);
+    let mut file = SiteFile::new(&site.path)?;
+    let mut site = Arc::new(site);
+    loop {
+        let next = match watch_site(&site, shutdown.as_mut(), &mut file).await? {
+            End::Stopped => return Ok(()),
+            End::Another(next) => Arc::new(*next),
+        };
+        match can_begin(&next) {
+            Ok(()) => site = next,
+            Err(error) => tracing::error!("the new site file cannot be put in force, the old one stays: {error:#}"),
+        }
+    }
+}
+
+/// How watching by one site file ended.
+enum End {
+    /// The service is to stop.
+    Stopped,
+    /// Another site file is to be put in force.
+    Another(Box<Site>),
+}
+
+/// Whether a site could be watched: its record and its ports can be had. Nothing is kept open.
+fn can_begin(site: &Arc<Site>) -> anyhow::Result<()> {
+    open_instruments(site)?;
+    Writer::open(&site.record.path)?;
+    Ok(())
+}
+
+/// Watches by one site file.
+async fn watch_site(
+    site: &Arc<Site>,
+    shutdown: std::pin::Pin<&mut impl Future<Output = &'static str>>,
+    file: &mut SiteFile,
+) -> anyhow::Result<End> {
     let (tx, rx) = mpsc::channel(WAITING);
-    let (keeper, outlets) = Keeper::open(Arc::clone(&site), clock::now())?;
-    let instruments = open_instruments(&site)?;
+    let (keeper, outlets) = Keeper::open(Arc::clone(site), clock::now())?;
+    let instruments = open_instruments(site)?;
     let listener = control::listen(&site.control_socket).context("the control socket")?;
 
     let pulse = Arc::new(Pulse::new(site.instruments.len() + 1));
@@ -74,10 +116,9 @@ pub async fn run(site: Site, shutdown: impl Future<Output = &'static str>) -> an
         // The other end waits for this as long as the service lives.
         let _ = ended_tx.send(keeper.run(rx));
     })?;
-
     let mut tasks = JoinSet::new();
     for (index, instrument) in instruments.into_iter().enumerate() {
-        let task = watch::Task::new(Arc::clone(&site), index, instrument, Arc::clone(&pulse));
+        let task = watch::Task::new(Arc::clone(site), index, instrument, Arc::clone(&pulse));
         tasks.spawn(watch::instrument(task, tx.clone(), stop.clone()));
     }
     tasks.spawn(serve::control(listener, tx.clone(), stop.clone()));
@@ -92,16 +133,67 @@ pub async fn run(site: Site, shutdown: impl Future<Output = &'static str>) -> an
     tracing::info!(site = site.name, cables, %record, "watching");
     pulse::say(&[sd_notify::NotifyState::Ready, sd_notify::NotifyState::Status(&format!("watching {cables} cables"))]);
 
-    let outcome = tokio::select! {
-        why = shutdown => {
-            tracing::info!("stopping: {why}");
+    let reason = tokio::select! {
+        reason = until_end(site, shutdown, file, &tx) => Some(reason),
+        outcome = &mut ended => {
+            // Nothing is left to be stopped but the tasks, whose messages nobody takes any more.
+            stop_all(&stop_tx, &mut tasks, site).await;
+            outcome.context("the keeper of the record ended without a word")??;
             None
         }
-        outcome = &mut ended => Some(outcome),
     };
-    pulse::say(&[sd_notify::NotifyState::Stopping]);
+    let Some(reason) = reason else { bail!("the keeper of the record ended by itself") };
+    stop_all(&stop_tx, &mut tasks, site).await;
+    let again = matches!(&reason, End::Another(next) if next.record.path == site.record.path);
+    let _ = tx.send(Message::Stop { again }).await;
+    ended.await.context("the keeper of the record ended without a word")??;
+    if keeper.join().is_err() {
+        bail!("the keeper of the record ended by a panic");
+    }
+    Ok(reason)
+}
+
+/// Waits for a reason to end: the service is to stop, or another site file is to be put in force.
+async fn until_end(
+    site: &Site,
+    mut shutdown: std::pin::Pin<&mut impl Future<Output = &'static str>>,
+    file: &mut SiteFile,
+    tx: &mpsc::Sender<Message>,
+) -> End {
+    loop {
+        let change = tokio::select! {
+            why = shutdown.as_mut() => {
+                tracing::info!("stopping: {why}");
+                pulse::say(&[sd_notify::NotifyState::Stopping]);
+                return End::Stopped;
+            }
+            change = file.change(&site.text) => change,
+        };
+        let refused = match change {
+            Change::Right(next) => {
+                tracing::info!(path = %site.path.display(), "the site file was saved, and is put in force");
+                if !next.warnings.is_empty() {
+                    tracing::warn!("the site file:\n{}", next.warnings.render(false));
+                }
+                return End::Another(next);
+            }
+            Change::Faulty(faults) => {
+                tracing::error!(
+                    "the site file was saved with faults and is refused; the one before stays in force\n{faults}"
+                );
+                Some(faults)
+            }
+            Change::AsBefore => None,
+        };
+        // A keeper that has ended is noticed elsewhere.
+        let _ = tx.send(Message::SiteFile { refused }).await;
+    }
+}
+
+/// Has all tasks stop and waits for them, but not for ever; then the control socket is removed.
+async fn stop_all(stop: &signal::Sender<bool>, tasks: &mut JoinSet<()>, site: &Site) {
     // Nobody may listen any more: then all have ended already.
-    let _ = stop_tx.send(true);
+    let _ = stop.send(true);
     let all = async { while tasks.join_next().await.is_some() {} };
     if tokio::time::timeout(PATIENCE, all).await.is_err() {
         tracing::warn!("some tasks did not stop in time and are left behind");
@@ -109,16 +201,6 @@ pub async fn run(site: Site, shutdown: impl Future<Output = &'static str>) -> an
     }
     // A socket that another service has meanwhile made would be removed too: but that one refuses to start before.
     let _ = std::fs::remove_file(&site.control_socket);
-    let outcome = if let Some(outcome) = outcome {
-        outcome
-    } else {
-        let _ = tx.send(Message::Stop).await;
-        ended.await
-    };
-    if keeper.join().is_err() {
-        bail!("the keeper of the record ended by a panic");
-    }
-    outcome.context("the keeper of the record ended without a word")?
 }
 
 /// The instruments of the site, none of whose ports another process holds.

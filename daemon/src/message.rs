@@ -31,8 +31,16 @@ pub(crate) enum Message {
         /// What went wrong, if something did: it will be tried again.
         error: Option<String>,
     },
+    /// The site file was saved, and is refused or right again.
+    SiteFile {
+        /// Its faults.
+        refused: Option<String>,
+    },
     /// Commit everything and end.
-    Stop,
+    Stop {
+        /// It goes on at once, by another site file.
+        again: bool,
+    },
 }
 
 /// A cable was swept.

@@ -122,7 +122,8 @@ impl Plant {
         child.wait().expect("gone");
     }
 
-    fn signal(&self, name: &str) {
+    /// Sends the service a signal.
+    pub fn signal(&self, name: &str) {
         let child = self.service.as_ref().expect("the service runs");
         let status =
             Command::new("kill").arg(format!("-{name}")).arg(child.id().to_string()).status().expect("kill runs");

@@ -242,6 +242,42 @@ fn stopped_in_order_the_gap_is_told() {
 }
 
 #[test]
+fn a_site_file_that_is_saved_is_put_in_force_and_a_faulty_one_refused() {
+    let mut plant = Plant::new("");
+    with_references(&mut plant);
+    let levels = "SELECT count(*) FROM levels";
+    let good = std::fs::read_to_string(plant.site()).expect("a site file");
+    // As most editors save: another file, renamed over the old one.
+    let save = |plant: &Plant, text: &str| {
+        let new = plant.folder().join("site.toml.new");
+        std::fs::write(&new, text).expect("written");
+        std::fs::rename(new, plant.site()).expect("renamed");
+    };
+    save(&plant, &good.replace("rbw = \"100 kHz\"", "rwb = \"100 kHz\""));
+    plant.wait_for("the refusal", |plant| plant.log().contains("did you mean `rbw`"));
+    let page = plant.ask(&["status", "--json"], 3);
+    assert!(page.is_empty(), "the companion cannot read the faulty file either: {page}");
+    let before = plant.count(levels);
+    plant.wait_for("more levels by the old file", |plant| plant.count(levels) > before + 20);
+
+    save(&plant, &good.replace("tag = \"W12\"", "tag = \"W12\"\ndescription = \"filler pump\""));
+    plant.wait_for("the new file", |plant| plant.log().contains("is put in force"));
+    let before = plant.count(levels);
+    plant.wait_for("levels by the new file", |plant| plant.count(levels) > before + 20);
+    assert_eq!(plant.count("SELECT count(*) FROM site_versions"), 2);
+    assert_eq!(plant.count("SELECT count(*) FROM gaps"), 0, "no cable missed a turn");
+    assert_eq!(plant.count("SELECT count(*) FROM epochs"), 0, "nothing bears on the levels");
+    let status = plant.ask(&["status"], 0);
+    assert!(!status.contains("no reference"), "references still count: {status}");
+    // The charts went on, and SIGHUP on a file that is as it was does nothing.
+    plant.signal("HUP");
+    plant.wait_for("the answer to SIGHUP", |plant| plant.log().contains("it is as it was"));
+    plant.device.turn().dbm.insert(1, QUIET_DBM + 6.0);
+    plant.wait_for("an alarm", |plant| !plant.alarms().is_empty());
+    assert!(plant.stop().success(), "{}", plant.log());
+}
+
+#[test]
 fn a_second_service_on_the_record_is_refused() {
     let mut plant = Plant::new("");
     plant.start();

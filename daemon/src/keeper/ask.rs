@@ -7,6 +7,9 @@ use hushwatch_record::RecordError;
 use super::Keeper;
 use crate::users;
 
+/// What status says of a site file that was saved with faults.
+const REFUSED: &str = "the site file was saved with faults; the one before stays in force:";
+
 impl Keeper {
     pub(super) fn asked(&mut self, request: Request, peer: Peer) -> Result<Reply, RecordError> {
         match request {
@@ -40,7 +43,7 @@ impl Keeper {
             up_us: i64::try_from(self.started.elapsed().as_micros()).unwrap_or(i64::MAX),
             instruments: instruments.collect(),
             waiting_notices: waiting as u64,
-            troubles: Vec::new(),
+            troubles: self.refused_site.iter().map(|faults| format!("{REFUSED}\n{faults}")).collect(),
         }
     }
 

@@ -12,13 +12,18 @@ use crate::outage::Consequence;
 impl Keeper {
     /// Between the last level and the start of the service nothing was measured.
     pub(super) fn resume_gaps(&mut self) -> Result<(), RecordError> {
-        let in_order = self.writer.read().remembered(start::STOPPED)?.is_some();
-        let reason = if in_order { "the service was stopped" } else { "the service ended without notice" };
+        let stopped = self.writer.read().remembered(start::STOPPED)?;
+        let reason = match stopped.as_deref() {
+            // No cable misses its turn by that.
+            Some(start::AGAIN) => None,
+            Some(_) => Some("the service was stopped"),
+            None => Some("the service ended without notice"),
+        };
         let open = self.writer.read().open_gaps()?;
         for (index, cable) in self.site.cables.iter().enumerate() {
             let known = &mut self.cables[index];
             known.gap = open.iter().find(|gap| gap.cable == cable.tag).map(|gap| gap.id);
-            if let (None, Some(latest)) = (known.gap, known.latest) {
+            if let (None, Some(latest), Some(reason)) = (known.gap, known.latest, reason) {
                 known.gap = Some(self.writer.begin_gap(known.id, latest, reason)?);
             }
         }

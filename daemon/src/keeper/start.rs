@@ -20,6 +20,9 @@ use crate::outage::Outage;
 /// Under this name the record remembers that the service was stopped in order.
 pub(super) const STOPPED: &str = "stopped";
 
+/// What it remembers there if the service went on at once, by another site file.
+pub(super) const AGAIN: &str = "again";
+
 pub(super) fn open(site: Arc<Site>, now: Time) -> Result<(Keeper, Vec<Delivery>), RecordError> {
     let mut writer = Writer::open(&site.record.path)?;
     if writer.site_version(now, &site.path, &site.text)? {
@@ -49,6 +52,7 @@ pub(super) fn open(site: Arc<Site>, now: Time) -> Result<(Keeper, Vec<Delivery>)
         started: Instant::now(),
         due: None,
         urgent: true,
+        refused_site: None,
         pulse: None,
     };
     keeper.resume_charts()?;
