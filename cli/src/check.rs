@@ -16,6 +16,7 @@ use serde::Serialize;
 
 use crate::context::{Context, colored, print_json, system_now};
 use crate::failure::Outcome;
+use crate::written::hundredths;
 use budget::Budget;
 
 /// A check failed.
@@ -221,7 +222,25 @@ fn in_words_cable(site: &Site, cable: &Cable, budget: &Budget) -> String {
     );
     text.push_str(&format!("  alarm at   a rise {rise}\n"));
     text.push_str(&format!("  sweep      {budget}\n"));
+    text.push_str(&format!(
+        "  a level is known to {}\n",
+        uncertainty(&hushwatch_plan::uncertainty(cable, &site.instruments[cable.instrument]))
+    ));
     text
+}
+
+/// How far a level may be off, with its parts.
+fn uncertainty(of: &hushwatch_signal::Uncertainty) -> String {
+    format!(
+        "+- {:.1} dB (k = 2: probe {:.1}, receiver {:.1}, mismatch {:.1}, repeating it {:.1} dB, standard uncertainties); \
+         against itself, to +- {:.1} dB",
+        of.expanded_db,
+        of.probe_db,
+        of.receiver_db,
+        of.mismatch_db,
+        of.repeatability_db,
+        2.0 * of.repeatability_db
+    )
 }
 
 fn probe(cable: &Cable) -> String {
@@ -288,6 +307,7 @@ struct WrittenCable<'a> {
     settle_s: f64,
     every_s: f64,
     reached_s: f64,
+    uncertainty_db: f64,
     expected: Vec<physics::Expected>,
 }
 
@@ -300,6 +320,7 @@ fn written<'a>(site: &'a Site, budgets: &[Budget]) -> Written<'a> {
         settle_s: budget.settle_s,
         every_s: budget.every_s,
         reached_s: budget::reached_s(site, budgets, cable.instrument).max(budget.every_s),
+        uncertainty_db: hundredths(hushwatch_plan::uncertainty(cable, &site.instruments[cable.instrument]).expanded_db),
         expected: physics::figures(cable),
     };
     Written {

@@ -237,6 +237,7 @@ fn tell(
     out.write_all(table(&["band", "level", "peak", "at", "carried by", "quality"], &rows, width()).as_bytes())?;
     writeln!(out)?;
     out.write_all(settings(answer).as_bytes())?;
+    writeln!(out, "\nA level is known to +- {:.1} dB (k = 2).", plan.uncertainty.expanded_db)?;
     Ok(())
 }
 

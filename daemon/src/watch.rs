@@ -151,7 +151,7 @@ impl Task {
             cable: plan.cable,
             time,
             state: state::at(&self.site, time),
-            settings: settings(answer),
+            settings: settings(answer, plan.uncertainty.expanded_db),
             bearing: answer.settings.bearing(),
             assumed: answer.settings.assumed(),
             identity: answer.settings.identity.clone(),
@@ -181,7 +181,16 @@ impl Task {
     }
 }
 
-/// What the instrument was set to, as JSON: equal settings give equal text.
-fn settings(answer: &SweepAnswer) -> String {
-    serde_json::to_string(&answer.settings).unwrap_or_else(|error| format!("{{\"unreadable\":\"{error}\"}}"))
+/// What the instrument was set to and how far its levels may be off, as JSON: equal settings give equal text.
+fn settings(answer: &SweepAnswer, uncertainty_db: f64) -> String {
+    #[derive(serde::Serialize)]
+    struct Stored<'a> {
+        #[serde(flatten)]
+        settings: &'a hushwatch_instrument::Settings,
+        /// dB, k = 2.
+        uncertainty_db: f64,
+    }
+    let uncertainty_db = (100.0 * uncertainty_db).round() / 100.0;
+    let stored = Stored { settings: &answer.settings, uncertainty_db };
+    serde_json::to_string(&stored).unwrap_or_else(|error| format!("{{\"unreadable\":\"{error}\"}}"))
 }

@@ -104,6 +104,8 @@ pub struct Instrument {
     pub floor: Option<Floor>,
     /// From this level on at its input it is overloaded, dB(uV), if it is known.
     pub overload_dbuv: Option<f64>,
+    /// Its uncertainty, dB, k = 2, if it is told.
+    pub uncertainty_db: Option<f64>,
     /// Where its name stands in the site file.
     pub place: Range<usize>,
 }
@@ -184,6 +186,7 @@ const KEYS: &[&str] = &[
     "clock",
     "floor",
     "overload",
+    "uncertainty",
 ];
 
 fn read_one(table: &Table<'_>, base: &Path) -> Option<Instrument> {
@@ -210,6 +213,7 @@ fn read_one(table: &Table<'_>, base: &Path) -> Option<Instrument> {
     let clock = table.read_or("clock", Clock::System, |value| value.choice(&clocks));
     let floor = table.read_if_any("floor", read_floor);
     let overload_dbuv = table.read_if_any("overload", read_overload);
+    let uncertainty_db = table.read_if_any("uncertainty", |value| value.quantity_within(&RATIO, 0.0..=20.0));
     check_flow(table, flow, format)?;
     Some(Instrument {
         name: table.optional("name")?.name()?.to_owned(),
@@ -231,6 +235,7 @@ fn read_one(table: &Table<'_>, base: &Path) -> Option<Instrument> {
         clock: clock?,
         floor: floor?,
         overload_dbuv: overload_dbuv?,
+        uncertainty_db: uncertainty_db?,
         place: table.optional("name")?.span(),
     })
 }

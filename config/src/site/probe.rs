@@ -68,6 +68,8 @@ pub struct Probe {
     pub path_loss: Vec<(f64, f64)>,
     /// Its serial number.
     pub serial: Option<String>,
+    /// Uncertainty of factor and path together, dB, k = 2, if it is told.
+    pub uncertainty_db: Option<f64>,
     /// When it was calibrated.
     pub calibrated: Option<Date>,
     /// When it is due again; not before it was calibrated.
@@ -88,8 +90,18 @@ impl Probe {
 
 impl Shelved for Probe {
     const KEY: &'static str = "probe";
-    const KEYS: &'static [&'static str] =
-        &["name", "kind", "factor", "factor_file", "path_loss", "path_loss_file", "serial", "calibrated", "due"];
+    const KEYS: &'static [&'static str] = &[
+        "name",
+        "kind",
+        "factor",
+        "factor_file",
+        "path_loss",
+        "path_loss_file",
+        "uncertainty",
+        "serial",
+        "calibrated",
+        "due",
+    ];
     /// The folder of the site file.
     type Context = PathBuf;
 
@@ -101,6 +113,7 @@ impl Shelved for Probe {
             kind.and_then(|kind| read_curve(table, ["factor", "factor_file"], base, kind.factor_dimension(), kind));
         let path_loss = read_curve(table, ["path_loss", "path_loss_file"], base, &RATIO, ProbeKind::Direct);
         let serial = table.read_if_any("serial", |value| value.line());
+        let uncertainty_db = table.read_if_any("uncertainty", |value| value.quantity_within(&RATIO, 0.0..=20.0));
         let calibrated = table.read_if_any("calibrated", |value| value.date());
         let due = table.read_if_any("due", |value| value.date());
         if let (Some(Some(done)), Some(Some(next)), Some(place)) = (calibrated, due, table.optional("due"))
@@ -115,6 +128,7 @@ impl Shelved for Probe {
             factor: factor?,
             path_loss: path_loss?,
             serial: serial?.map(str::to_owned),
+            uncertainty_db: uncertainty_db?,
             calibrated: calibrated?,
             due: due?,
         })

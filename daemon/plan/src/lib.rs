@@ -25,6 +25,8 @@ pub struct CablePlan {
     pub every: Span,
     /// What the instrument is told.
     pub sweep: SweepPlan,
+    /// How far its levels may be off.
+    pub uncertainty: signal::Uncertainty,
     bands: Vec<signal::Band>,
     /// Which band each segment belongs to.
     band_of: Vec<usize>,
@@ -51,6 +53,7 @@ impl CablePlan {
             cable,
             every: described.every.unwrap_or(EVERY),
             sweep,
+            uncertainty: uncertainty(described, instrument),
             band_of: segments.iter().map(|segment| segment.band).collect(),
             bands,
             chain: chain(described)?,
@@ -118,6 +121,25 @@ pub fn bands(cable: &Cable, instrument: &Instrument) -> Vec<signal::Band> {
         exclude: band.exclude.clone(),
     };
     cable.bands.iter().map(band).collect()
+}
+
+/// How far a level of a cable may be off, by what the site file tells of its chain and common practice for the rest.
+pub fn uncertainty(cable: &Cable, instrument: &Instrument) -> signal::Uncertainty {
+    use signal::uncertainty as known;
+    let attenuated = instrument.attenuation_db.is_some_and(|db| db >= 10.0);
+    signal::uncertainty(&signal::ChainKnowledge {
+        probe_db: cable.probe.uncertainty_db.unwrap_or(match cable.probe.kind {
+            ProbeKind::Direct => 0.0,
+            ProbeKind::Current | ProbeKind::Loop => known::PROBE_DB,
+        }),
+        receiver_db: instrument.uncertainty_db.unwrap_or(known::RECEIVER_DB),
+        receiver_vswr: if attenuated { known::RECEIVER_VSWR.1 } else { known::RECEIVER_VSWR.0 },
+        source_vswr: known::SOURCE_VSWR,
+        repeatability_db: match cable.probe.kind {
+            ProbeKind::Loop => known::LOOP_REPEATABILITY_DB,
+            ProbeKind::Current | ProbeKind::Direct => known::REPEATABILITY_DB,
+        },
+    })
 }
 
 fn chain(cable: &Cable) -> Result<signal::CorrectionChain, CurveError> {

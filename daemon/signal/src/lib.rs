@@ -44,6 +44,7 @@ mod character;
 mod curve;
 mod receiver;
 mod segments;
+pub mod uncertainty;
 
 #[cfg(test)]
 mod level_tests;
@@ -58,3 +59,4 @@ pub use character::{Character, LINE_DB, character};
 pub use curve::{Curve, CurveError};
 pub use receiver::{Floor, Receiver, subtract_floor};
 pub use segments::{Segment, plan_segments, scan_time_s, transfer_time_s};
+pub use uncertainty::{ChainKnowledge, Uncertainty, uncertainty};
