@@ -34,6 +34,7 @@ fn described(port: PathBuf) -> site::Instrument {
         clock: Clock::System,
         floor: None,
         overload_dbuv: None,
+        uncertainty_db: None,
         place: 0..0,
     }
 }
