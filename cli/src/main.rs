@@ -12,6 +12,7 @@ mod reference;
 mod replay;
 mod simulate;
 mod standing;
+mod state;
 mod status;
 mod sweep;
 mod times;
@@ -68,6 +69,8 @@ enum Command {
     Sweep(sweep::Arguments),
     /// Mark an interval of the log as before or after the fix
     Reference(reference::Arguments),
+    /// Tell the operating state, where the site file leaves that to people
+    State(state::Arguments),
     /// Levels, alarms or gaps for other programs
     Export(export::Arguments),
     /// What would these settings have alarmed on? Levels from a file through the charts
@@ -94,6 +97,7 @@ fn main() -> ExitCode {
         Command::Alarms(command) => alarms::run(&context, &command),
         Command::Sweep(command) => sweep::run(&context, &command),
         Command::Reference(command) => reference::run(&context, &command),
+        Command::State(command) => state::run(&context, &command),
         Command::Export(command) => export::run(&context, &command),
         Command::Replay(command) => replay::run(&context, &command),
         Command::Demo(command) => demo::run(&command),

@@ -21,7 +21,7 @@ use hushwatch_config::site::{Clock, Site};
 use hushwatch_drift::{Engine, Finding, SeriesId, StateId};
 use hushwatch_quantity::{LevelUnit, Time};
 use hushwatch_record::{CableId, OutboxRow, RecordError, Writer};
-use tokio::sync::mpsc;
+use tokio::sync::{mpsc, watch as signal};
 use tokio::time::Instant;
 
 use crate::clock;
@@ -55,6 +55,8 @@ pub(crate) struct Keeper {
     due: Option<Instant>,
     /// To be committed before the next message.
     urgent: bool,
+    /// The operating state as people told it last, for the instruments' tasks.
+    told_state: signal::Sender<String>,
     /// The faults of a site file that was saved and refused.
     refused_site: Option<String>,
     /// Where it promises to be heard of again, and as which part.
@@ -119,6 +121,11 @@ impl Keeper {
     /// Has it promise to be heard of, as this part.
     pub(crate) fn with_pulse(self, pulse: Arc<Pulse>, part: usize) -> Self {
         Self { pulse: Some((pulse, part)), ..self }
+    }
+
+    /// Where to look up which operating state people told last.
+    pub(crate) fn told_state(&self) -> signal::Receiver<String> {
+        self.told_state.subscribe()
     }
 
     /// Takes messages until told to stop, or until nobody is left to send any.

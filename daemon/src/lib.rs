@@ -110,6 +110,7 @@ async fn watch_site(
 
     let pulse = Arc::new(Pulse::new(site.instruments.len() + 1));
     let keeper = keeper.with_pulse(Arc::clone(&pulse), site.instruments.len());
+    let told_state = keeper.told_state();
     let (stop_tx, stop) = signal::channel(false);
     let (ended_tx, mut ended) = oneshot::channel();
     let keeper = std::thread::Builder::new().name("keeper".into()).spawn(move || {
@@ -118,7 +119,7 @@ async fn watch_site(
     })?;
     let mut tasks = JoinSet::new();
     for (index, instrument) in instruments.into_iter().enumerate() {
-        let task = watch::Task::new(Arc::clone(site), index, instrument, Arc::clone(&pulse));
+        let task = watch::Task::new(Arc::clone(site), index, instrument, Arc::clone(&pulse), told_state.clone());
         tasks.spawn(watch::instrument(task, tx.clone(), stop.clone()));
     }
     tasks.spawn(serve::control(listener, tx.clone(), stop.clone()));

@@ -1,10 +1,12 @@
-//! What the machine is doing: by the site file's calendar, or by a file that the machine's controller writes.
+//! What the machine is doing: by the site file's calendar, by a file that the machine's controller writes, or as people
+//! tell.
 
 use hushwatch_config::site::{OperatingStates, Site};
 use hushwatch_quantity::Time;
 
-/// The operating state at a time (plant time).
-pub(crate) fn at(site: &Site, time: Time) -> String {
+/// The operating state at a time (plant time);
+/// `told` is what people told last.
+pub(crate) fn at(site: &Site, time: Time, told: &str) -> String {
     if let Some(state) = site.scheduled_state(time) {
         return state.to_owned();
     }
@@ -13,9 +15,7 @@ pub(crate) fn at(site: &Site, time: Time) -> String {
             let content = std::fs::read_to_string(path).unwrap_or_default();
             site.operating_states.state_in_file(&content).unwrap_or(otherwise).to_owned()
         }
-        OperatingStates::Manual { states } => {
-            states.first().map_or(OperatingStates::UNKNOWN, String::as_str).to_owned()
-        }
+        OperatingStates::Manual { .. } => told.to_owned(),
         OperatingStates::Untold | OperatingStates::Calendar { .. } => OperatingStates::UNKNOWN.to_owned(),
     }
 }

@@ -48,11 +48,19 @@ pub(crate) struct Task {
     trouble: Option<ErrorClass>,
     pause: Duration,
     pulse: Arc<Pulse>,
+    /// The operating state that people told last.
+    told_state: signal::Receiver<String>,
 }
 
 impl Task {
     /// An instrument with all that is to be swept on it.
-    pub(crate) fn new(site: Arc<Site>, index: usize, instrument: Instrument, pulse: Arc<Pulse>) -> Self {
+    pub(crate) fn new(
+        site: Arc<Site>,
+        index: usize,
+        instrument: Instrument,
+        pulse: Arc<Pulse>,
+        told_state: signal::Receiver<String>,
+    ) -> Self {
         let cables: Vec<usize> =
             (0..site.cables.len()).filter(|cable| site.cables[*cable].instrument == index).collect();
         let free_running = site.instruments[index].clock == Clock::Instrument;
@@ -66,6 +74,7 @@ impl Task {
             trouble: None,
             pause: PAUSES.0,
             pulse,
+            told_state,
         };
         task.plan();
         let every = task.plans.iter().map(|plan| plan.every);
@@ -150,7 +159,7 @@ impl Task {
         Some(Message::Swept(Swept {
             cable: plan.cable,
             time,
-            state: state::at(&self.site, time),
+            state: state::at(&self.site, time, &self.told_state.borrow()),
             settings: settings(answer, plan.uncertainty.expanded_db),
             bearing: answer.settings.bearing(),
             assumed: answer.settings.assumed(),

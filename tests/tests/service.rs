@@ -230,6 +230,27 @@ fn levels_of_other_settings_are_never_compared() {
 }
 
 #[test]
+fn people_tell_the_operating_state_where_it_is_left_to_them() {
+    let states = "[operating_states]\nsource = \"manual\"\nstates = [\"running\", \"idle\"]\n";
+    let mut plant = Plant::new(states);
+    plant.start();
+    let of_state =
+        |plant: &Plant, state: &str| plant.count(&format!("SELECT count(*) FROM levels WHERE state = '{state}'"));
+    plant.wait_for("levels of the first state", |plant| of_state(plant, "running") > 0);
+    plant.ask(&["state", "idle"], 0);
+    plant.wait_for("levels of the other state", |plant| of_state(plant, "idle") > 0);
+    let wrong = plant.hushwatch(&["state", "idel"]);
+    let said = hushwatch_tests::programs::told(&wrong);
+    assert!(wrong.status.code() == Some(3) && said.contains("did you mean `idle`"), "{said}");
+    // It is remembered over a crash.
+    let before = of_state(&plant, "running");
+    plant.kill();
+    plant.start();
+    assert_eq!(of_state(&plant, "running"), before);
+    assert!(plant.stop().success(), "{}", plant.log());
+}
+
+#[test]
 fn stopped_in_order_the_gap_is_told() {
     let mut plant = Plant::new("");
     plant.start();

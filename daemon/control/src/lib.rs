@@ -11,7 +11,9 @@ mod messages;
 mod server;
 
 pub use client::{Client, ControlError};
-pub use messages::{Acknowledge, Hello, InstrumentStatus, LaidReference, MarkReference, Reply, Request, Status, When};
+pub use messages::{
+    Acknowledge, Hello, InstrumentStatus, LaidReference, MarkReference, Reply, Request, SetState, Status, When,
+};
 pub use server::{ListenError, Peer, converse, listen};
 
 /// The version of the protocol; both ends must have the same.

@@ -16,6 +16,8 @@ pub enum Request {
     Reference(MarkReference),
     /// Take an alarm up.
     Acknowledge(Acknowledge),
+    /// The machine is in another operating state from now on; only where the site file leaves that to people.
+    State(SetState),
     /// Commit what is gathered, so that whoever reads the record sees all of it.
     Flush,
 }
@@ -56,6 +58,13 @@ pub struct Acknowledge {
     pub note: String,
     /// `choke`, `source`, `measurement` or `other`.
     pub cause: String,
+}
+
+/// An operating state, as people tell it.
+#[derive(Clone, Debug, PartialEq, Eq, Serialize, Deserialize)]
+pub struct SetState {
+    /// Its name, one of those in the site file.
+    pub state: String,
 }
 
 /// What is answered.

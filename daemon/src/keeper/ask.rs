@@ -1,10 +1,12 @@
 //! Requests on the control socket.
 
 use hushwatch_alarm::{Acknowledged, Cause, Event};
-use hushwatch_control::{Acknowledge, Hello, InstrumentStatus, PROTOCOL, Peer, Reply, Request, Status};
+use hushwatch_config::site::OperatingStates;
+use hushwatch_config::walk::suggestion;
+use hushwatch_control::{Acknowledge, Hello, InstrumentStatus, PROTOCOL, Peer, Reply, Request, SetState, Status};
 use hushwatch_record::RecordError;
 
-use super::Keeper;
+use super::{Keeper, start};
 use crate::users;
 
 /// What status says of a site file that was saved with faults.
@@ -24,6 +26,7 @@ impl Keeper {
                 self.urgent = true;
                 Ok(Reply::Done)
             }
+            Request::State(ask) => self.set_state(ask, peer),
             Request::Acknowledge(ask) => self.acknowledge(ask, peer),
             Request::Reference(mark) => self.mark_reference(mark, peer),
         }
@@ -45,6 +48,23 @@ impl Keeper {
             waiting_notices: waiting as u64,
             troubles: self.refused_site.iter().map(|faults| format!("{REFUSED}\n{faults}")).collect(),
         }
+    }
+
+    fn set_state(&mut self, ask: SetState, peer: Peer) -> Result<Reply, RecordError> {
+        let OperatingStates::Manual { states } = &self.site.operating_states else {
+            let why = "the site file does not leave the operating state to people: `[operating_states]` needs \
+                       `source = \"manual\"` and its `states`";
+            return Ok(Reply::Refused { why: why.to_owned() });
+        };
+        if !states.contains(&ask.state) {
+            let near = suggestion(&ask.state, states.iter().map(String::as_str));
+            return Ok(Reply::Refused { why: format!("there is no operating state `{}`; {near}", ask.state) });
+        }
+        self.writer.remember(start::TOLD_STATE, Some(&ask.state))?;
+        self.urgent = true;
+        tracing::info!(state = ask.state, by = who(None, peer), "operating state");
+        self.told_state.send_replace(ask.state);
+        Ok(Reply::Done)
     }
 
     fn acknowledge(&mut self, ask: Acknowledge, peer: Peer) -> Result<Reply, RecordError> {

@@ -5,12 +5,12 @@ use std::ops::ControlFlow;
 use std::sync::Arc;
 
 use hushwatch_alarm::{AlarmKey, AlarmKind, Board, Event};
-use hushwatch_config::site::{ProbeKind, Site};
+use hushwatch_config::site::{OperatingStates, ProbeKind, Site};
 use hushwatch_drift::engine::{FalseAlarms, RECENT_BLOCKS};
 use hushwatch_drift::{Engine, EngineSettings, Reading, ReferenceKind, SeriesId, SeriesSettings, StateId};
 use hushwatch_quantity::{LevelUnit, Time};
 use hushwatch_record::{Filter, LevelRow, RecordError, Writer};
-use tokio::sync::mpsc;
+use tokio::sync::{mpsc, watch as signal};
 use tokio::time::Instant;
 
 use super::{Cable, Instrument, Keeper, Recipient, Series};
@@ -19,6 +19,9 @@ use crate::outage::Outage;
 
 /// Under this name the record remembers that the service was stopped in order.
 pub(super) const STOPPED: &str = "stopped";
+
+/// Under this name the record remembers the operating state that people told last.
+pub(super) const TOLD_STATE: &str = "told-state";
 
 /// What it remembers there if the service went on at once, by another site file.
 pub(super) const AGAIN: &str = "again";
@@ -38,6 +41,7 @@ pub(super) fn open(site: Arc<Site>, now: Time) -> Result<(Keeper, Vec<Delivery>)
         block: site.drift.block,
         false_alarms: FalseAlarms { count: site.drift.false_alarms_count, per: site.drift.false_alarms_per },
     });
+    let told_state = signal::Sender::new(told_state(&site, &writer)?);
     let states = writer.read().states()?.into_iter().collect();
     let mut keeper = Keeper {
         site,
@@ -52,6 +56,7 @@ pub(super) fn open(site: Arc<Site>, now: Time) -> Result<(Keeper, Vec<Delivery>)
         started: Instant::now(),
         due: None,
         urgent: true,
+        told_state,
         refused_site: None,
         pulse: None,
     };
@@ -60,6 +65,13 @@ pub(super) fn open(site: Arc<Site>, now: Time) -> Result<(Keeper, Vec<Delivery>)
     keeper.clear_what_is_watched_no_more(now)?;
     keeper.writer.remember(STOPPED, None)?;
     Ok((keeper, deliveries))
+}
+
+/// The operating state that people told last, if the site file still knows it; else the first one.
+fn told_state(site: &Site, writer: &Writer) -> Result<String, RecordError> {
+    let OperatingStates::Manual { states } = &site.operating_states else { return Ok(String::new()) };
+    let told = writer.read().remembered(TOLD_STATE)?.filter(|told| states.contains(told));
+    Ok(told.or_else(|| states.first().cloned()).unwrap_or_default())
 }
 
 fn take_up(writer: &mut Writer, cable: &hushwatch_config::site::Cable) -> Result<Cable, RecordError> {
