@@ -161,7 +161,7 @@ impl Task {
             time,
             state: state::at(&self.site, time, &self.told_state.borrow()),
             settings: settings(answer, plan.uncertainty.expanded_db),
-            bearing: answer.settings.bearing(),
+            bearing: plan.bearing.iter().cloned().chain(answer.settings.bearing()).collect(),
             assumed: answer.settings.assumed(),
             identity: answer.settings.identity.clone(),
             levels: plan.levels(answer),

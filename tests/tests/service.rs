@@ -216,14 +216,23 @@ fn levels_of_other_settings_are_never_compared() {
     assert!(epochs.lines().count() == 2 && epochs.contains("rbw_hz is 200000, not 100000"), "{epochs}");
     let page = plant.ask(&["status"], 0);
     assert!(page.contains("W12: its references no longer count since"), "{page}");
+    // The probe's factor bears on a level as well: other levels by the same receiver.
+    let site = std::fs::read_to_string(plant.site()).expect("a site file");
+    std::fs::write(plant.site(), site.replace("[\"2 MHz\", 12.0]", "[\"2 MHz\", 13.0]")).expect("a site file");
+    plant.wait_for("the other factor", |plant| plant.count("SELECT count(*) FROM epochs") == 4);
+    let epochs = plant.sql("SELECT reason FROM epochs ORDER BY time DESC LIMIT 1").expect("a record");
+    assert!(epochs.contains("factor is a table of 3 points"), "{epochs}");
+    let blocks = plant.count("SELECT count(*) FROM blocks");
+    // Long enough that chance is not taken for memory: of a handful of blocks nobody can tell how correlated they are.
+    plant.wait_for("25 seconds of blocks", |plant| plant.count("SELECT count(*) FROM blocks") >= blocks + 50);
     // An interval that reaches back before the change makes no reference; one after it does.
     let refused = plant.hushwatch(&["reference", "W12", "after", "--last", "1h"]);
     assert!(hushwatch_tests::programs::told(&refused).contains("other settings"));
-    plant.ask(&["reference", "W12", "after", "--last", "8s", "--note", "wider filter"], 0);
+    plant.ask(&["reference", "W12", "after", "--last", "24s", "--note", "wider filter"], 0);
     // It is remembered over a restart.
     plant.kill();
     plant.start();
-    assert_eq!(plant.count("SELECT count(*) FROM epochs"), 2);
+    assert_eq!(plant.count("SELECT count(*) FROM epochs"), 4);
     plant.device.turn().dbm.insert(1, QUIET_DBM + 15.0);
     plant.wait_for("an alarm by the new reference", |plant| !plant.alarms().is_empty());
     assert_eq!(kinds_and_cables(&plant.alarms()), [("regression".to_owned(), "W12".to_owned())]);

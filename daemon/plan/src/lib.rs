@@ -27,6 +27,8 @@ pub struct CablePlan {
     pub sweep: SweepPlan,
     /// How far its levels may be off.
     pub uncertainty: signal::Uncertainty,
+    /// What of the site file bears on its levels, as lines `name = value`: levels are comparable only where it is the same.
+    pub bearing: Vec<String>,
     bands: Vec<signal::Band>,
     /// Which band each segment belongs to.
     band_of: Vec<usize>,
@@ -54,6 +56,7 @@ impl CablePlan {
             every: described.every.unwrap_or(EVERY),
             sweep,
             uncertainty: uncertainty(described, instrument),
+            bearing: bearing(site, described),
             band_of: segments.iter().map(|segment| segment.band).collect(),
             bands,
             chain: chain(described)?,
@@ -140,6 +143,29 @@ pub fn uncertainty(cable: &Cable, instrument: &Instrument) -> signal::Uncertaint
             ProbeKind::Current | ProbeKind::Direct => known::REPEATABILITY_DB,
         },
     })
+}
+
+/// What of the site file bears on the levels of a cable, and on the blocks that references stand on.
+fn bearing(site: &Site, cable: &Cable) -> Vec<String> {
+    let mut lines = vec![
+        format!("probe = {}", cable.probe.kind.label()),
+        format!("factor = {}", table(&cable.probe.factor)),
+        format!("path loss = {}", table(&cable.probe.path_loss)),
+        format!("block = {}", site.drift.block),
+    ];
+    for band in &cable.bands {
+        let exclude: Vec<String> = band.exclude.iter().map(|(from, to)| format!("{from}-{to}")).collect();
+        let without = if exclude.is_empty() { String::new() } else { format!(" without {}", exclude.join(", ")) };
+        lines.push(format!("band {} = {}-{} Hz{without}", band.name, band.from_hz, band.to_hz));
+    }
+    lines
+}
+
+/// A table as a word that is another one as soon as one of its numbers is (FNV-1a, 64 bits).
+fn table(points: &[(f64, f64)]) -> String {
+    let bytes = points.iter().flat_map(|(hz, db)| [hz.to_bits(), db.to_bits()]).flat_map(u64::to_le_bytes);
+    let sum = bytes.fold(0xcbf2_9ce4_8422_2325_u64, |sum, byte| (sum ^ u64::from(byte)).wrapping_mul(0x100_0000_01b3));
+    format!("a table of {} points, {sum:016x}", points.len())
 }
 
 fn chain(cable: &Cable) -> Result<signal::CorrectionChain, CurveError> {
