@@ -16,13 +16,19 @@
 //! `D = max_rise/2`; for normal errors the mean of `1/ARL` is kept if the scale is widened by `sqrt(1 + 2 L var(v))` and
 //! the chart's reference value raised by `L var(d) / D`, not beyond the 99 % limit of the error of the location.
 //!
+//! **Gross rises.** Where the reference is so short that nobody can tell how correlated its blocks are, the CUSUM becomes slow
+//! for small rises, which is right, and for large ones, which is not. So [`GROSS_BLOCKS`] blocks in a row that lie farther
+//! above the null's edge than chance takes a single one at a tenth of the wanted rate signal as well (a combined
+//! Shewhart-CUSUM scheme, Lucas 1982; from memory). Only the reference's error of scale and location widens that limit: it
+//! asks for the blocks themselves, not for their sums, so that their correlation does not matter.
+//!
 //! **Return.** While a finding stands, the mirrored chart asks the opposite (null: `max_rise` or more, alternative:
 //! `max_rise`/2 or less) with the same threshold. When it signals, the finding is cleared and the chart starts from zero.
 
 use hushwatch_quantity::{Span, Time};
 use serde::{Deserialize, Serialize};
 
-use crate::reference::t_quantile;
+use crate::reference::{normal_quantile, t_quantile};
 use crate::{Block, Finding, ReferenceFigure, run_length, stored};
 
 /// Greatest reference value `k`, in sigma of an increment. Where the noise is far below `max_rise`, the tail of its
@@ -33,6 +39,12 @@ pub const MAX_K: f64 = 1.5;
 /// The most that one block adds, as a share of the threshold: a hair over a third, so that three blocks at least make an
 /// alarm (two give 0.668 of the threshold, three 1.002) and a burst within one block does not.
 pub const CAP: f64 = 0.334;
+
+/// So many blocks in a row, each far above what chance takes one, are a gross rise; no fewer than the cap asks for.
+pub const GROSS_BLOCKS: u32 = 3;
+
+/// The share of the wanted false alarms that the search for gross rises may take, at most.
+const GROSS_SHARE: f64 = 0.1;
 
 /// Shortest in-control run length that is designed for, in blocks: below, "false" alarms would be the rule.
 pub const MIN_ARL_BLOCKS: f64 = 10.0;
@@ -63,6 +75,8 @@ pub struct Design {
     pub threshold: f64,
     /// In-control run length that the threshold stands for, in blocks.
     pub arl_blocks: f64,
+    /// A block that lies so far above the target, dB, is gross.
+    pub gross_db: f64,
 }
 
 impl Design {
@@ -79,6 +93,8 @@ impl Design {
         let error = after.standard_error_db;
         let limit = error * t_quantile(LOCATION_LIMIT, after.scale_freedom());
         let raised = (log_arl * error * error / distance).min(limit);
+        let scale = after.sigma_db * (1.0 + log_arl / after.scale_freedom()).sqrt();
+        let gross_db = distance + raised + normal_quantile(1.0 - GROSS_SHARE / arl_blocks) * scale;
         Self {
             target_db: after.median_db,
             max_rise_db,
@@ -88,6 +104,7 @@ impl Design {
             k,
             threshold: run_length::threshold_for(k, arl_blocks).max(MIN_THRESHOLD),
             arl_blocks,
+            gross_db,
         }
     }
 
@@ -149,6 +166,9 @@ pub struct ChartState {
     pub blocks: u64,
     /// The statistic; while a finding stands, what it was when that was raised.
     pub statistic: f64,
+    /// How many blocks in a row, up to the last one, were gross.
+    #[serde(default)]
+    pub gross: u32,
     /// The last block seen.
     pub previous: Option<Previous>,
     /// The finding that stands, if any.
@@ -177,17 +197,18 @@ pub struct Active {
 }
 
 /// What a block led to.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[derive(Clone, Copy, Debug, PartialEq)]
 pub(crate) enum Signal {
     None,
-    Raise,
+    /// By this statistic, which passed this threshold.
+    Raise(f64, f64),
     Return,
 }
 
 impl ChartState {
     /// A chart that has seen nothing yet.
     pub(crate) fn new(epoch: u32, from: Time, target_db: f64, max_rise_db: f64) -> Self {
-        Self { epoch, from, target_db, max_rise_db, blocks: 0, statistic: 0.0, previous: None, active: None }
+        Self { epoch, from, target_db, max_rise_db, blocks: 0, statistic: 0.0, gross: 0, previous: None, active: None }
     }
 
     /// Takes the next block, of length `length`. What comes out is for the engine to act on: `Raise` only without,
@@ -203,7 +224,19 @@ impl ChartState {
         let Some(active) = &mut self.active else {
             let evidence = design.evidence(deviation, previous, design.reference_value_db);
             self.statistic = cusum_step(self.statistic, design.capped(evidence));
-            return if self.statistic > design.threshold { Signal::Raise } else { Signal::None };
+            let adjacent = previous.is_some_and(|(ago, _)| ago == 1);
+            self.gross = match deviation > design.gross_db {
+                true if adjacent => self.gross + 1,
+                true => 1,
+                false => 0,
+            };
+            return if self.statistic > design.threshold {
+                Signal::Raise(self.statistic, design.threshold)
+            } else if self.gross >= GROSS_BLOCKS {
+                Signal::Raise(deviation, design.gross_db)
+            } else {
+                Signal::None
+            };
         };
         // The error of the reference does not hinder the return: too early a return costs a repeated alarm, not a lost one.
         let evidence = -design.evidence(deviation, previous, 0.75 * self.max_rise_db);

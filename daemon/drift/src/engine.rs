@@ -90,7 +90,7 @@ pub struct Finding {
     pub target_db: f64,
     /// The rise that was looked for, dB.
     pub max_rise_db: f64,
-    /// The statistic that told it,
+    /// The statistic that told it: the CUSUM's, or how far the last of some gross blocks lay above the target, dB,
     pub statistic: f64,
     /// and the threshold that it passed.
     pub threshold: f64,

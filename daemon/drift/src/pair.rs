@@ -145,12 +145,12 @@ impl Pair {
         let known = block.start + share.block;
         match chart.state.step(&design, share.block, block) {
             Signal::None => self.retell(known),
-            Signal::Raise => self.raise(share, &design, known),
+            Signal::Raise(statistic, threshold) => self.raise(share, (statistic, threshold), known),
             Signal::Return => self.clear(&design, known),
         }
     }
 
-    fn raise(&mut self, share: Share, design: &Design, known: Time) -> Option<Outcome> {
+    fn raise(&mut self, share: Share, (statistic, threshold): (f64, f64), known: Time) -> Option<Outcome> {
         let state = &self.chart.as_ref()?.state;
         let (since, rise_db) = self.size(state, None, known)?;
         let finding = Finding {
@@ -162,8 +162,8 @@ impl Pair {
             since,
             target_db: state.target_db,
             max_rise_db: state.max_rise_db,
-            statistic: state.statistic,
-            threshold: design.threshold,
+            statistic,
+            threshold,
         };
         let active = Active { finding: finding.clone(), return_statistic: 0.0, return_blocks: 0 };
         self.chart.as_mut()?.state.active = Some(active);
@@ -190,6 +190,7 @@ impl Pair {
         let state = &mut self.chart.as_mut()?.state;
         let Active { finding, return_statistic, return_blocks } = state.active.take()?;
         state.statistic = 0.0;
+        state.gross = 0;
         let target_db = state.target_db;
         let back: Vec<f64> = self.recent.iter().rev().take(return_blocks as usize).map(|b| b.median_db).collect();
         let rise_db = robust::median(&back)? - target_db;

@@ -9,7 +9,7 @@ use std::borrow::Cow;
 
 use hushwatch_quantity::Span;
 use serde::{Deserialize, Serialize};
-use statrs::distribution::{ContinuousCDF, StudentsT};
+use statrs::distribution::{ContinuousCDF, Normal, StudentsT};
 
 use crate::{Block, robust, stored};
 
@@ -235,6 +235,11 @@ fn difference(of: Location, from: Location) -> Suppression {
 /// Quantile of Student's t; infinite where there are no degrees of freedom, for then nothing is known.
 pub(crate) fn t_quantile(probability: f64, freedom: f64) -> f64 {
     StudentsT::new(0.0, 1.0, freedom).map_or(f64::INFINITY, |t| t.inverse_cdf(probability))
+}
+
+/// Quantile of the normal distribution.
+pub(crate) fn normal_quantile(probability: f64) -> f64 {
+    Normal::standard().inverse_cdf(probability)
 }
 
 /// How a series stands now, in one operating state.

@@ -158,6 +158,52 @@ fn a_new_reference_starts_a_new_epoch_and_ends_what_stood() {
 }
 
 #[test]
+fn a_gross_rise_is_found_at_once_even_by_a_poor_reference() {
+    // Seven blocks that happen to rise slowly: they look as correlated as can be, so that the CUSUM is slow.
+    let mut engine = Engine::new(settings());
+    engine.watch(SERIES, SeriesSettings::default());
+    let outcomes = feed(&mut engine, &levels(0..8, 0.0, 1, |block| 40.0 + 0.02 * block as f64));
+    let figure = reference_figure(&blocks_of(&outcomes), BLOCK).expect("a figure");
+    assert!(figure.rho > 0.6 && figure.blocks == 7, "{figure:?}");
+    engine.set_reference(SERIES, STATE, ReferenceKind::After, figure, at(8));
+    let outcomes = feed(&mut engine, &levels(8..40, 0.05, 2, |_| 40.1));
+    assert_eq!(raised(&outcomes), None);
+    let outcomes = feed(&mut engine, &levels(40..60, 0.05, 3, |_| 46.1));
+    let finding = raised(&outcomes).expect("a finding");
+    assert_eq!((finding.since, finding.time), (at(40), at(43)), "{finding:?}");
+    assert!(finding.statistic > finding.threshold);
+}
+
+#[test]
+fn false_alarms_are_no_more_frequent_than_asked_for() {
+    // At the edge of the null, one block a reading, at a rate that can be counted: one in a day, 144 blocks.
+    for rho in [0.0, 0.5, 0.9] {
+        let asked = EngineSettings { block: BLOCK, false_alarms: FalseAlarms { count: 1.0, per: Span::from_days(1) } };
+        let mut engine = Engine::new(asked);
+        engine.watch(SERIES, SeriesSettings { max_rise_db: Some(2.0), min_suppression_db: None });
+        let mut noise = Noise(0x1234_5678_9abc_def1);
+        let mut state = 0.0;
+        let mut next = move || {
+            state = rho * state + (1.0f64 - rho * rho).sqrt() * noise.normal();
+            state
+        };
+        let (reference, charted) = (4_000, 60_000);
+        let readings: Vec<Reading> = (0..reference).map(|n| reading(at(n), 40.0 + next())).collect();
+        let figure = reference_figure(&blocks_of(&feed(&mut engine, &readings)), BLOCK).expect("a figure");
+        engine.set_reference(SERIES, STATE, ReferenceKind::After, figure, at(reference));
+        let mut raised = 0;
+        for n in reference..reference + charted {
+            let outcomes = engine.observe(reading(at(n), 41.0 + next()));
+            raised += outcomes.iter().filter(|outcome| matches!(outcome, Outcome::Raised(_))).count();
+        }
+        let asked = charted as f64 / 144.0;
+        assert!((raised as f64) < 2.0 * asked, "rho {rho}: {raised} instead of {asked:.0}");
+        // And the chart is not asleep: at its alternative it speaks.
+        assert!(raised > 0, "rho {rho}");
+    }
+}
+
+#[test]
 fn what_cannot_be_compared_is_never_charted_together() {
     let mut engine = engine_with_reference(3.0);
     let outcomes = feed(&mut engine, &levels(289..400, 0.5, 24, |_| 46.0));

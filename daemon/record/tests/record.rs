@@ -261,6 +261,7 @@ fn an_epoch_ends_the_charts_of_its_cable_alone() {
         max_rise_db: 3.0,
         blocks: 0,
         statistic: 0.5,
+        gross: 0,
         previous: None,
         active: None,
     };
